@@ -1,4 +1,5 @@
 /* whorl.h 0.1.0: every module of the library. See README.md; define WHORL_IMPLEMENTATION in exactly one source file. */
 #include "whorl_core.h"
+#include "whorl_pauli.h"
 #include "whorl_space.h"
 #include "whorl_lattice.h"
