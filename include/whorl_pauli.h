@@ -13,15 +13,15 @@
  *
  * It does not know states, vectors or text: see whorl_space.h, whorl_action.h, whorl_text.h.
  *
- * Conventions: site i is bit i of the masks. Bit 0 of a state is spin up, Z|0> = +|0>. S = (X, Y, Z)/2; S^- takes bit 0 to
- * bit 1 and S^+ bit 1 to bit 0. On a basis state P|s> = i^popcount(x & z) (-1)^popcount(z & s) |s ^ x>.
+ * Conventions: site i is bit i of the masks. Bit 0 of a state is spin up, Z|0> = +|0>. S = (X, Y, Z)/2; S^- takes bit 0
+ * to bit 1 and S^+ bit 1 to bit 0. On a basis state P|s> = i^popcount(x & z) (-1)^popcount(z & s) |s ^ x>.
  * Signs: +J S_i.S_j (J > 0 antiferromagnetic), S_i^T J S_j with the row index on i, +D.(S_i x S_j), -h.(g S).
  *
  * Memory: term arrays are the caller's. Only products take scratch (whorl_sum_product_bytes); nothing is kept.
  * Threads: none are used. Long calls poll the host.
- * Errors: a failed call leaves *out and the sum's fields as they were. Arguments are checked before anything is written.
- * References: D. Gottesman, arXiv:quant-ph/9705052 (1997), strings as pairs of bit vectors; T. Moriya, Phys. Rev. 120, 91
- * (1960), antisymmetric exchange.
+ * Errors: a failed call leaves *out and the sum's fields as they were. Arguments are checked before writing.
+ * References: D. Gottesman, arXiv:quant-ph/9705052 (1997), strings as pairs of bit vectors; T. Moriya, Phys. Rev. 120,
+ * 91 (1960), antisymmetric exchange.
  */
 #include "whorl_core.h"
 
@@ -36,7 +36,7 @@
 WHORLI_C_BEGIN
 WHORLI_ARITHMETIC_BEGIN
 
-/* ---- terms and sums -------------------------------------------------------------------------------------------------- */
+/* ---- terms and sums ---------------------------------------------------------------------------------------------- */
 
 /* (re + i im) i^popcount(x & z) X^x Z^z */
 typedef struct whorl_term {
@@ -77,13 +77,13 @@ WHORL_API whorl_complex whorl_sum_coefficient(const whorl_sum *sum, uint64_t x, 
 /* The sites on which it acts, as a mask; O(n). */
 WHORL_API uint64_t whorl_sum_support(const whorl_sum *sum);
 
-/* ---- constructors of terms ------------------------------------------------------------------------------------------- */
+/* ---- constructors of terms --------------------------------------------------------------------------------------- */
 
 /*
- * Each writes its terms from `terms` on and returns how many: at most the number that the macro tells. They cannot fail:
- * a site outside 0 .. 63 or an unknown axis gives a term with coefficient NaN, which whorl_sum_from_terms refuses by its
- * index. Zero coefficients are written too; tidying drops them. Equal sites i = j give the operator that the formula
- * means (S_i.S_i = 3/4, S x S = i S), which need not be Hermitian.
+ * Each writes its terms from `terms` on and returns how many: at most the number that the macro tells. They cannot
+ * fail: a site outside 0 .. 63 or an unknown axis gives a term with coefficient NaN, which whorl_sum_from_terms refuses
+ * by its index. Zero coefficients are written too; tidying drops them. Equal sites i = j give the operator that the
+ * formula means (S_i.S_i = 3/4, S x S = i S), which need not be Hermitian.
  */
 #define WHORL_STRING_TERMS 1
 #define WHORL_NUMBER_TERMS 1
@@ -112,15 +112,15 @@ WHORL_API uint64_t whorl_terms_antisymmetric(whorl_term *terms, int32_t i, int32
 WHORL_API uint64_t whorl_terms_field(whorl_term *terms, int32_t site, const double h[3], const double g[9]);
 /*
  * strength (m_i.m_j - 3 (m_i.n)(m_j.n)) / r^3 with m = g S as above, r = |displacement|, n = displacement / r: magnetic
- * dipoles at a distance. strength carries the units: mu_0 mu_B^2 / (4 pi) is 0.62295 K for r in angstrom (from the CODATA
- * 2018 constants). A displacement of zero length is refused like a bad site.
+ * dipoles at a distance. strength carries the units: mu_0 mu_B^2 / (4 pi) is 0.62295 K for r in angstrom (from the
+ * CODATA 2018 constants). A displacement of zero length is refused like a bad site.
  */
 WHORL_API uint64_t whorl_terms_dipolar(whorl_term *terms, int32_t i, int32_t j, const double displacement[3],
                                        const double gi[9], const double gj[9], double strength);
 
-/* ---- algebra --------------------------------------------------------------------------------------------------------- */
+/* ---- algebra ----------------------------------------------------------------------------------------------------- */
 
-/* The product of two terms, the power of i exact: 1 multiplication of complex numbers. */
+/* The product of two terms, the power of i exactly. */
 WHORL_API whorl_term whorl_term_multiply(whorl_term a, whorl_term b);
 /* 1 if the strings commute, 0 if they anticommute. */
 static inline int32_t whorl_strings_commute(uint64_t ax, uint64_t az, uint64_t bx, uint64_t bz)
@@ -132,8 +132,8 @@ static inline int32_t whorl_strings_commute(uint64_t ax, uint64_t az, uint64_t b
  * Results go into the caller's `terms` of `room` elements, and *out views them. `terms` may not overlap the terms of a
  * or b; a, b and out may be the same structs. Where the room does not do, WHORL_NO_ROOM: reason.index is the number of
  * terms of the result, nothing is written (so room 0 with terms NULL asks for the number).
- * Errors common to the three: WHORL_BAD_ARGUMENT (a or b not tidy, unequal numbers of sites, overlap), WHORL_NOT_FINITE (a
- * weight is not finite; a coefficient overflows), WHORL_NO_ROOM.
+ * Errors common to the three: WHORL_BAD_ARGUMENT (a or b not tidy, unequal numbers of sites, overlap),
+ * WHORL_NOT_FINITE (a weight is not finite; a coefficient overflows), WHORL_NO_ROOM.
  */
 
 /* wa A + wb B. Cost O(n + m), no memory. */
@@ -160,8 +160,8 @@ WHORL_API whorl_status whorl_sum_adjoint(whorl_host *host, whorl_sum *sum);
 /*
  * Site i becomes site site_to[i] of `sites` sites (1 .. 64), in place; site_to has sum->sites entries, all different.
  * Renumbers the sites, or embeds a cluster in a larger one. Cost O(n (sites + log n)), no memory.
- * Errors: WHORL_BAD_ARGUMENT with the index of the offending entry of site_to, or as whorl_sum_check; WHORL_CANCELLED (the
- * terms are then those of the result, out of order: tidy them).
+ * Errors: WHORL_BAD_ARGUMENT with the index of the offending entry of site_to, or as whorl_sum_check; WHORL_CANCELLED
+ * (the terms are then those of the result, out of order: tidy them).
  */
 WHORL_API whorl_status whorl_sum_embed(whorl_host *host, whorl_sum *sum, int32_t sites, const int32_t *site_to);
 /* The same with as many sites as before: a permutation. */
@@ -170,8 +170,9 @@ WHORL_API whorl_status whorl_sum_permute(whorl_host *host, whorl_sum *sum, const
 WHORL_API whorl_status whorl_sum_conjugate(whorl_host *host, whorl_sum *sum, uint64_t x, uint64_t z);
 /*
  * D^dagger A D with D|s> = i^popcount(gauge & s)|s>, in place: on the sites of the mask X becomes -Y, Y becomes X, Z
- * stays (S^+ becomes i S^+, S^- becomes -i S^-). If v is an eigenvector of the result, D v is one of A. Cost O(n log n).
- * Errors: WHORL_BAD_ARGUMENT (gauge has sites beyond the sum's), or as whorl_sum_check; WHORL_CANCELLED as for embedding.
+ * stays (S^+ becomes i S^+, S^- becomes -i S^-). If v is an eigenvector of the result, D v is one of A.
+ * Cost O(n log n). Errors: WHORL_BAD_ARGUMENT (gauge has sites beyond the sum's), or as whorl_sum_check;
+ * WHORL_CANCELLED as for embedding.
  */
 WHORL_API whorl_status whorl_sum_rotate(whorl_host *host, whorl_sum *sum, uint64_t gauge);
 /*
@@ -181,7 +182,7 @@ WHORL_API whorl_status whorl_sum_rotate(whorl_host *host, whorl_sum *sum, uint64
  */
 WHORL_API whorl_status whorl_sum_real_gauge(whorl_host *host, const whorl_sum *sum, uint64_t *gauge);
 
-/* ---- what a sum is ----------------------------------------------------------------------------------------------------- */
+/* ---- what a sum is ----------------------------------------------------------------------------------------------- */
 
 /* 2^-N Tr A: the coefficient of the identity. */
 WHORL_API whorl_complex whorl_sum_trace(const whorl_sum *sum);
@@ -200,7 +201,7 @@ WHORLI_ARITHMETIC_END
 WHORLI_C_END
 #endif /* WHORL_PAULI_INCLUDED */
 
-/* ==== implementation ================================================================================================== */
+/* ==== implementation ============================================================================================== */
 #if defined(WHORL_IMPLEMENTATION) && !defined(WHORL_PAULI_IMPLEMENTED)
 #define WHORL_PAULI_IMPLEMENTED
 
@@ -210,7 +211,7 @@ WHORLI_C_END
 WHORLI_C_BEGIN
 WHORLI_ARITHMETIC_BEGIN
 
-/* ---- >>order ----------------------------------------------------------------------------------------------------------- */
+/* ---- >>order ----------------------------------------------------------------------------------------------------- */
 
 static int32_t whorli_string_order(const whorl_term *a, const whorl_term *b)
 {
@@ -253,39 +254,119 @@ static void whorli_terms_sift(whorl_term *terms, uint64_t root, uint64_t count)
     terms[root] = held;
 }
 
-/* One sift moves at most 64 terms: 2^18 of them stay within the promised distance of polls. */
-static whorl_status whorli_sort_poll(whorl_host *host, uint64_t step, uint64_t steps)
+static void whorli_terms_heapsort(whorl_term *terms, uint64_t count)
 {
-    if ((step & ((UINT64_C(1) << 18) - 1)) != 0)
-        return WHORL_OK;
-    whorl_stage(host, "sorting terms", steps - step, steps);
-    return whorl_poll(host);
-}
-
-/* Heapsort: in place, no bad case, and a permutation of the terms whenever it stops. Terms in order are left alone. */
-static whorl_status whorli_terms_sort(whorl_host *host, whorl_term *terms, uint64_t count)
-{
-    whorl_status status = WHORL_OK;
-    uint64_t i = 1;
-    while (i < count && whorli_term_order(terms + i - 1, terms + i) <= 0)
-        i++;
-    if (i >= count)
-        return WHORL_OK;
-    for (i = count / 2; i-- > 0 && status == WHORL_OK;) {
+    uint64_t i;
+    for (i = count / 2; i-- > 0;)
         whorli_terms_sift(terms, i, count);
-        status = whorli_sort_poll(host, count + i, 2 * count);
-    }
-    for (i = count; i-- > 1 && status == WHORL_OK;) {
+    for (i = count; i-- > 1;) {
         whorl_term last = terms[i];
         terms[i] = terms[0];
         terms[0] = last;
         whorli_terms_sift(terms, 0, i);
-        status = whorli_sort_poll(host, i, 2 * count);
     }
-    return status;
 }
 
-/* ---- >>checks ---------------------------------------------------------------------------------------------------------- */
+static void whorli_terms_insertion(whorl_term *terms, uint64_t count)
+{
+    uint64_t i, j;
+    for (i = 1; i < count; i++) {
+        whorl_term held = terms[i];
+        for (j = i; j > 0 && whorli_term_order(&held, terms + j - 1) < 0; j--)
+            terms[j] = terms[j - 1];
+        terms[j] = held;
+    }
+}
+
+static const whorl_term *whorli_term_median(const whorl_term *a, const whorl_term *b, const whorl_term *c)
+{
+    if (whorli_term_order(a, b) > 0) {
+        const whorl_term *held = a;
+        a = b;
+        b = held;
+    }
+    return whorli_term_order(b, c) <= 0 ? b : whorli_term_order(a, c) <= 0 ? c : a;
+}
+
+/* Splits three terms or more: before *low none is above the pivot, from *high on none is below; between, the pivot. */
+static void whorli_terms_split(whorl_term *terms, uint64_t count, uint64_t *low, uint64_t *high)
+{
+    const whorl_term pivot = *whorli_term_median(terms, terms + count / 2, terms + count - 1);
+    uint64_t i = 0, j = count; /* terms[j - 1] is looked at: j never passes below 0 */
+    for (;;) {
+        while (whorli_term_order(terms + i, &pivot) < 0)
+            i++;
+        while (whorli_term_order(&pivot, terms + j - 1) < 0)
+            j--;
+        if (i < j) {
+            whorl_term held = terms[i];
+            terms[i++] = terms[j - 1];
+            terms[--j] = held;
+        }
+        if (i >= j)
+            break;
+    }
+    *low = j;
+    *high = i;
+}
+
+/* A piece still to be sorted, and how many splits it may see before heapsort takes it over. */
+typedef struct whorli_piece {
+    uint64_t first, count;
+    int32_t splits;
+} whorli_piece;
+
+/*
+ * Sorts in place in O(n log n) at worst: quicksort with the longer part kept for later (so 64 pieces do), heapsort
+ * where splits go wrong, insertion for short pieces. The terms are a permutation of the input whenever it stops. Terms
+ * in order are left alone.
+ */
+static whorl_status whorli_terms_sort(whorl_host *host, whorl_term *terms, uint64_t count)
+{
+    whorli_piece kept[64], piece;
+    int32_t kept_count = 0;
+    uint64_t i = 1, since_poll = 0;
+    while (i < count && whorli_term_order(terms + i - 1, terms + i) <= 0)
+        i++;
+    if (i >= count)
+        return WHORL_OK;
+    piece.first = 0;
+    piece.count = count;
+    piece.splits = 2 * whorl_bits_highest(count);
+    for (;;) {
+        while (piece.count > 16 && piece.splits > 0) {
+            uint64_t low, high;
+            whorli_terms_split(terms + piece.first, piece.count, &low, &high);
+            since_poll += piece.count;
+            kept[kept_count] = piece;
+            kept[kept_count].splits = --piece.splits;
+            if (low > piece.count - high) {
+                kept[kept_count++].count = low;
+                piece.first += high;
+                piece.count -= high;
+            } else {
+                kept[kept_count].first += high;
+                kept[kept_count++].count -= high;
+                piece.count = low;
+            }
+        }
+        if (piece.count > 16)
+            whorli_terms_heapsort(terms + piece.first, piece.count);
+        else
+            whorli_terms_insertion(terms + piece.first, piece.count);
+        if (kept_count == 0)
+            return WHORL_OK;
+        piece = kept[--kept_count];
+        if (since_poll >= UINT64_C(1) << 21) {
+            whorl_stage(host, "sorting terms", piece.first, count);
+            if (whorl_poll(host) != WHORL_OK)
+                return WHORL_CANCELLED;
+            since_poll = 0;
+        }
+    }
+}
+
+/* ---- >>checks ---------------------------------------------------------------------------------------------------- */
 
 static whorl_text whorli_term_fail(whorl_host *host, whorl_status status, uint64_t index)
 {
@@ -327,8 +408,8 @@ static whorl_status whorli_sum_valid(whorl_host *host, const whorl_sum *sum)
         const whorl_term *term = sum->terms + i;
         if (!whorli_term_finite(term)) {
             whorl_text text = whorli_term_fail(host, WHORL_NOT_FINITE, i);
-            whorl_text_add(&text, " has a coefficient that is NaN or infinite: correct the coupling, or the site or axis "
-                                  "that its constructor was given (sites are 0 .. 63)");
+            whorl_text_add(&text, " has a coefficient that is NaN or infinite: correct the coupling, or the site or "
+                                  "axis that its constructor was given (sites are 0 .. 63)");
             return WHORL_NOT_FINITE;
         }
         if (((term->x | term->z) & ~inside) != 0) {
@@ -358,7 +439,7 @@ whorl_status whorl_sum_check(whorl_host *host, const whorl_sum *sum)
     return status;
 }
 
-/* ---- >>tidy ------------------------------------------------------------------------------------------------------------ */
+/* ---- >>tidy ------------------------------------------------------------------------------------------------------ */
 
 /* Adds up the equal strings from terms[at] on; returns the index behind them. */
 static uint64_t whorli_equal_total(const whorl_term *terms, uint64_t at, uint64_t count, whorl_term *total)
@@ -448,7 +529,7 @@ uint64_t whorl_sum_support(const whorl_sum *sum)
     return mask;
 }
 
-/* ---- >>constructors ---------------------------------------------------------------------------------------------------- */
+/* ---- >>constructors ---------------------------------------------------------------------------------------------- */
 
 static whorl_term whorli_term_of(uint64_t x, uint64_t z, double re, double im)
 {
@@ -615,7 +696,7 @@ uint64_t whorl_terms_dipolar(whorl_term *terms, int32_t i, int32_t j, const doub
     return whorl_terms_exchange_matrix(terms, i, j, matrix);
 }
 
-/* ---- >>sums ------------------------------------------------------------------------------------------------------------ */
+/* ---- >>sums ------------------------------------------------------------------------------------------------------ */
 
 static int32_t whorli_terms_overlap(const whorl_term *terms, uint64_t room, const whorl_sum *sum)
 {
@@ -673,7 +754,8 @@ static void whorli_term_add(whorl_term *to, whorl_complex w, const whorl_term *t
 }
 
 /* Merges wa A + wb B into terms (NULL: counts only). The number of terms, or WHORL_NONE after an overflow. */
-static uint64_t whorli_merge(const whorl_sum *a, whorl_complex wa, const whorl_sum *b, whorl_complex wb, whorl_term *terms)
+static uint64_t whorli_merge(const whorl_sum *a, whorl_complex wa, const whorl_sum *b, whorl_complex wb,
+                             whorl_term *terms)
 {
     uint64_t i = 0, j = 0, count = 0;
     while (i < a->count || j < b->count) {
@@ -748,7 +830,7 @@ whorl_status whorl_sum_adjoint(whorl_host *host, whorl_sum *sum)
     return WHORL_OK;
 }
 
-/* ---- >>products -------------------------------------------------------------------------------------------------------- */
+/* ---- >>products -------------------------------------------------------------------------------------------------- */
 
 whorl_term whorl_term_multiply(whorl_term a, whorl_term b)
 {
@@ -943,8 +1025,8 @@ static whorl_status whorli_product_run(whorl_host *host, const whorl_sum *a, con
     return status;
 }
 
-whorl_status whorl_sum_multiply(whorl_host *host, const whorl_sum *a, const whorl_sum *b, whorl_term *terms, uint64_t room,
-                                whorl_sum *out)
+whorl_status whorl_sum_multiply(whorl_host *host, const whorl_sum *a, const whorl_sum *b, whorl_term *terms,
+                                uint64_t room, whorl_sum *out)
 {
     return whorli_product_run(host, a, b, 0, terms, room, out);
 }
@@ -955,7 +1037,7 @@ whorl_status whorl_sum_commutator(whorl_host *host, const whorl_sum *a, const wh
     return whorli_product_run(host, a, b, 1, terms, room, out);
 }
 
-/* ---- >>transformations ------------------------------------------------------------------------------------------------- */
+/* ---- >>transformations ------------------------------------------------------------------------------------------- */
 
 static uint64_t whorli_mask_moved(uint64_t mask, const int32_t *site_to)
 {
@@ -1099,7 +1181,7 @@ whorl_status whorl_sum_real_gauge(whorl_host *host, const whorl_sum *sum, uint64
     return WHORL_OK;
 }
 
-/* ---- >>properties ------------------------------------------------------------------------------------------------------ */
+/* ---- >>properties ------------------------------------------------------------------------------------------------ */
 
 whorl_complex whorl_sum_trace(const whorl_sum *sum)
 {
