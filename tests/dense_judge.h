@@ -1,6 +1,7 @@
 /*
- * dense_judge.h: what the fast code is held against in tests. It shares only the types of whorl_pauli.h with the library:
- * matrices are built by Kronecker products of explicit 2 x 2 matrices, products are taken term by term and site by site.
+ * dense_judge.h: what the fast code is held against in tests. It shares only the types of whorl_pauli.h with the
+ * library: matrices are built by Kronecker products of explicit 2 x 2 matrices, products are taken term by term and site
+ * by site.
  *
  * Complex matrices and vectors are interleaved doubles; matrices are n x n, column-major: element (r, c) at
  * m[2 * (r + n * c)]. Site 0 is the least significant bit of a row or column number.
@@ -27,9 +28,12 @@ static inline void *judge_memory(uint64_t count, uint64_t size)
     }
     return memory;
 }
-static inline double *judge_reals(uint64_t count) { return (double *)judge_memory(count, sizeof(double)); }
+static inline double *judge_reals(uint64_t count)
+{
+    return (double *)judge_memory(count, sizeof(double));
+}
 
-/* ---- dense matrices -------------------------------------------------------------------------------------------------- */
+/* ---- dense matrices ---------------------------------------------------------------------------------------------- */
 
 /* 2 x 2 matrices, row by row, re and im: rows and columns are bit 0 (up), bit 1 (down). */
 static const double judge_one[8] = {1, 0, 0, 0, 0, 0, 1, 0};
@@ -168,7 +172,7 @@ static inline whorl_complex judge_trace(uint64_t n, const double *a)
     return trace;
 }
 
-/* ---- products term by term ------------------------------------------------------------------------------------------- */
+/* ---- products term by term --------------------------------------------------------------------------------------- */
 
 /* The index of a state in a list that ascends; states NULL: all, and the index is the state. WHORL_NONE if absent. */
 static inline uint64_t judge_find(const uint64_t *states, uint64_t count, uint64_t state)
@@ -239,7 +243,8 @@ static inline double judge_product_between(const whorl_sum *sum, const uint64_t 
 }
 
 /* y = A x within one list of states. */
-static inline double naive_product(const whorl_sum *sum, const uint64_t *states, uint64_t count, const double *x, double *y)
+static inline double naive_product(const whorl_sum *sum, const uint64_t *states, uint64_t count, const double *x,
+                                   double *y)
 {
     return judge_product_between(sum, states, count, states, count, x, y);
 }
@@ -277,7 +282,7 @@ static inline uint64_t *judge_states_down(int32_t sites, int32_t down, uint64_t 
     return states;
 }
 
-/* ---- LAPACK ---------------------------------------------------------------------------------------------------------- */
+/* ---- LAPACK ------------------------------------------------------------------------------------------------------ */
 
 #ifdef HAVE_LAPACK
 extern void dsyev_(const char *job, const char *half, const int *n, double *a, const int *stride, double *values,
@@ -307,7 +312,7 @@ static inline int judge_lapack_hermitian(uint64_t n, double *a, double *values, 
 }
 #endif
 
-/* ---- random sums ----------------------------------------------------------------------------------------------------- */
+/* ---- random sums ------------------------------------------------------------------------------------------------- */
 
 enum {
     JUDGE_HERMITIAN = 1, /* real coefficients */
@@ -315,7 +320,7 @@ enum {
     JUDGE_CONSERVING = 4 /* keeps the number of down spins: pairs XX + YY and XY - YX, times Z strings, and Z strings */
 };
 
-/* Writes a random sum of about `count` terms (at most 2 count are written) and tidies it; seeded, so it can be repeated. */
+/* Writes a random sum of about `count` terms (at most 2 count are written) and tidies it; the same for the same seed. */
 static inline whorl_sum judge_random_sum(uint64_t seed, int32_t sites, uint64_t count, int kind, whorl_term *terms)
 {
     whorl_host host = whorl_host_default();

@@ -1,4 +1,4 @@
-/* Sums of Pauli strings: against Kronecker matrices, published traces and identities, the laws of the algebra, edges. */
+/* Sums of Pauli strings: against Kronecker matrices, published traces and identities, laws of the algebra, edges. */
 #include <time.h>
 
 #include "check.h"
@@ -8,7 +8,10 @@
 
 static whorl_host host;
 
-static whorl_complex number(double re, double im) { return whorl_complex_of(re, im); }
+static whorl_complex number(double re, double im)
+{
+    return whorl_complex_of(re, im);
+}
 
 /* Room for the results of small sums. */
 enum { ROOM = 5000 };
@@ -66,7 +69,7 @@ static whorl_sum total(const whorl_sum *a, double wa, const whorl_sum *b, double
     return out;
 }
 
-/* ---- published values ------------------------------------------------------------------------------------------------ */
+/* ---- published values -------------------------------------------------------------------------------------------- */
 
 /* p or p/q, as the tables write exact rationals. */
 static double rational(const char *text)
@@ -134,13 +137,13 @@ static void traces(void)
     static const struct {
         const char *name, *cluster;
         int32_t sites;
-    } cases[] = {{"ring6", NULL, 6},  {"ring8", NULL, 8},         {"triangle", NULL, 3},      {"square4", NULL, 4},
+    } cases[] = {{"ring6", NULL, 6}, {"ring8", NULL, 8},     {"triangle", NULL, 3}, {"square4", NULL, 4},
                  {"tetra", NULL, 4}, {"tri12", "tri12", 12}, {"kag12", "kag12", 12}};
     static whorl_term square_terms[ROOM], cube_terms[70000];
     size_t c;
     for (c = 0; c < sizeof cases / sizeof cases[0]; c++) {
         bond bonds[64];
-        uint64_t count = cases[c].cluster != NULL           ? table_bonds(cases[c].cluster, bonds)
+        uint64_t count = cases[c].cluster != NULL              ? table_bonds(cases[c].cluster, bonds)
                          : strcmp(cases[c].name, "tetra") == 0 ? complete_bonds(4, bonds)
                                                                : ring_bonds(cases[c].sites, bonds);
         whorl_sum h = exchange_of(cases[c].sites, bonds, count, arena[0]), square, cube = {0, 0, NULL};
@@ -150,8 +153,9 @@ static void traces(void)
         for (power = 2; power <= 4; power++) {
             char id[64];
             reference_row row;
-            double got = power == 2 ? whorl_sum_trace(&square).re : power == 3 ? whorl_sum_trace(&cube).re
-                                                                               : whorl_sum_square_trace(&square);
+            double got = power == 2   ? whorl_sum_trace(&square).re
+                         : power == 3 ? whorl_sum_trace(&cube).re
+                                      : whorl_sum_square_trace(&square);
             snprintf(id, sizeof id, "tr_%s_%d", cases[c].name, power);
             if (CHECK(reference_find("15_traces_series.tsv", id, &row)))
                 CHECK_NEAR(got, rational(row.field[REFERENCE_VALUE]), 0.0, id);
@@ -196,7 +200,10 @@ static void trace_formulas(void)
     CHECK_NEAR(whorl_sum_trace(&square).re, 64.0 / 4.0, 0.0, "trSz2, N = 64");
 }
 
-/* 16_mappings_and_identities.tsv, rows id_pauli_prod, id_pauli_tr, id_ss_sq, id_swap, id_cyc, id_jw: term by term, exactly. */
+/*
+ * 16_mappings_and_identities.tsv, rows id_pauli_prod, id_pauli_tr, id_ss_sq, id_swap, id_cyc, id_jw: term by term,
+ * exactly.
+ */
 static void identities(void)
 {
     int a, b, c;
@@ -269,15 +276,17 @@ static void identities(void)
         right = made(3, arena[5], used);
         CHECK(same_sum(&out, &right));
     }
-    { /* Jordan-Wigner: c_j^+ = S^+_j prod_{l<j} (-2 S^z_l) (exp(i pi n), n = S^z + 1/2) anticommute: {c_i, c_j^+} = delta */
+    { /* Jordan-Wigner: c_j^+ = S^+_j prod_{l<j} (-2 S^z_l), as exp(i pi n) = -2 S^z: {c_i, c_j^+} = delta */
         int32_t i, j;
         whorl_sum one = made(5, arena[8], whorl_terms_number(arena[8], 1.0));
         for (i = 0; i < 5; i++)
             for (j = 0; j < 5; j++) {
                 whorl_sum create = made(5, arena[0], whorl_terms_spin(arena[0], j, '+', 1.0));
                 whorl_sum destroy = made(5, arena[1], whorl_terms_spin(arena[1], i, '-', 1.0));
-                whorl_sum tail_j = made(5, arena[2], whorl_terms_string(arena[2], 0, whorl_bits_low(j), j % 2 ? -1.0 : 1.0));
-                whorl_sum tail_i = made(5, arena[3], whorl_terms_string(arena[3], 0, whorl_bits_low(i), i % 2 ? -1.0 : 1.0));
+                whorl_sum tail_j =
+                    made(5, arena[2], whorl_terms_string(arena[2], 0, whorl_bits_low(j), j % 2 ? -1.0 : 1.0));
+                whorl_sum tail_i =
+                    made(5, arena[3], whorl_terms_string(arena[3], 0, whorl_bits_low(i), i % 2 ? -1.0 : 1.0));
                 whorl_sum cj = product(&create, &tail_j, arena[4]), ci = product(&destroy, &tail_i, arena[5]);
                 whorl_sum there = product(&ci, &cj, arena[6]), back = product(&cj, &ci, arena[7]);
                 out = total(&there, 1.0, &back, 1.0, arena[9]);
@@ -288,7 +297,7 @@ static void identities(void)
     }
 }
 
-/* ---- constructors against explicit spin matrices --------------------------------------------------------------------- */
+/* ---- constructors against explicit spin matrices ----------------------------------------------------------------- */
 
 /* S^axis at a site of `sites`: sigma / 2 by Kronecker products. */
 static double *spin_matrix(int32_t sites, int32_t site, int axis)
@@ -447,7 +456,10 @@ static void refused_terms(void)
             case 7: used += whorl_terms_dipolar(at, 0, s, ones, ones, ones, 1.0); break;
             case 8: used += whorl_terms_spin(at, 0, 'w', 1.0); break;
             case 9: used += whorl_terms_dipolar(at, 0, 1, nowhere, NULL, NULL, 1.0); break;
-            case 10: used += whorl_terms_exchange(at, 0, 1, (double)INFINITY); before += 0; break;
+            case 10:
+                used += whorl_terms_exchange(at, 0, 1, (double)INFINITY);
+                before += 0;
+                break;
             default: used += whorl_terms_number(at, (double)NAN); break;
             }
             memset(arena[1], 0, sizeof arena[1]);
@@ -459,7 +471,7 @@ static void refused_terms(void)
         }
 }
 
-/* ---- algebra against dense matrices ---------------------------------------------------------------------------------- */
+/* ---- algebra against dense matrices ------------------------------------------------------------------------------ */
 
 static void algebra_dense(void)
 {
@@ -470,7 +482,8 @@ static void algebra_dense(void)
             uint64_t n = UINT64_C(1) << sites, k, seed = (uint64_t)(100 * sites + kind);
             whorl_sum a = judge_random_sum(seed, sites, 12, kind, arena[0]);
             whorl_sum b = judge_random_sum(seed + 50, sites, 9, kind, arena[1]), out;
-            double *da = judge_dense(&a), *db = judge_dense(&b), *ab = judge_reals(2 * n * n), *ba = judge_reals(2 * n * n);
+            double *da = judge_dense(&a), *db = judge_dense(&b), *ab = judge_reals(2 * n * n),
+                   *ba = judge_reals(2 * n * n);
             double *want = judge_reals(2 * n * n);
             whorl_complex trace;
             out = product(&a, &b, arena[2]);
@@ -486,8 +499,8 @@ static void algebra_dense(void)
 
             judge_add(n, want, 0.75, -0.5, da);
             judge_add(n, want, -1.5, 2.0, db);
-            CHECK_STATUS(whorl_sum_add(&host, &a, number(0.75, -0.5), &b, number(-1.5, 2.0), arena[2], ROOM, &out), WHORL_OK,
-                         &host);
+            CHECK_STATUS(whorl_sum_add(&host, &a, number(0.75, -0.5), &b, number(-1.5, 2.0), arena[2], ROOM, &out),
+                         WHORL_OK, &host);
             check_matrix(&out, want, 1e-14, "wa A + wb B");
 
             memset(want, 0, (size_t)(2 * n * n) * sizeof(double));
@@ -568,7 +581,8 @@ static void transformations_dense(void)
             for (i = 0; i < sites; i++)
                 site_to[i] = i;
             for (i = sites - 1; i > 0; i--) {
-                int32_t other = (int32_t)(whorl_random_bits(seed, 77, (uint64_t)i) % (uint64_t)(i + 1)), held = site_to[i];
+                int32_t other = (int32_t)(whorl_random_bits(seed, 77, (uint64_t)i) % (uint64_t)(i + 1)),
+                        held = site_to[i];
                 site_to[i] = site_to[other];
                 site_to[other] = held;
             }
@@ -630,7 +644,7 @@ static void embedding(void)
     CHECK(whorl_sum_support(&small) == 0xd);
 }
 
-/* ---- laws ------------------------------------------------------------------------------------------------------------ */
+/* ---- laws -------------------------------------------------------------------------------------------------------- */
 
 static void laws(void)
 {
@@ -638,7 +652,8 @@ static void laws(void)
     size_t k;
     for (k = 0; k < sizeof sizes / sizeof sizes[0]; k++) {
         int32_t sites = sizes[k];
-        whorl_sum a = judge_random_sum(11 + k, sites, 10, 0, arena[0]), b = judge_random_sum(31 + k, sites, 11, 0, arena[1]);
+        whorl_sum a = judge_random_sum(11 + k, sites, 10, 0, arena[0]),
+                  b = judge_random_sum(31 + k, sites, 11, 0, arena[1]);
         whorl_sum c = judge_random_sum(51 + k, sites, 9, 0, arena[2]), ab, bc, ca, one, two, three, out;
         double scale = whorl_sum_norm_bound(&a) * whorl_sum_norm_bound(&b) * whorl_sum_norm_bound(&c);
         /* Jacobi: [A, [B, C]] + [B, [C, A]] + [C, [A, B]] = 0 */
@@ -702,7 +717,8 @@ static void exact_symmetry(void)
     whorl_sum h, raise, out;
     for (i = 0; i < 12; i++) {
         for (j = i + 1; j < 12; j++)
-            used += whorl_terms_exchange(arena[0] + used, i, j, whorl_random_normal(5, 0, (uint64_t)(12 * i + j)) / 3.0);
+            used +=
+                whorl_terms_exchange(arena[0] + used, i, j, whorl_random_normal(5, 0, (uint64_t)(12 * i + j)) / 3.0);
         up += whorl_terms_spin(arena[1] + up, i, '+', 1.0);
     }
     h = made(12, arena[0], used);
@@ -714,7 +730,7 @@ static void exact_symmetry(void)
     CHECK(out.count > 0);
 }
 
-/* ---- real gauge ------------------------------------------------------------------------------------------------------ */
+/* ---- real gauge -------------------------------------------------------------------------------------------------- */
 
 static void real_gauges(void)
 {
@@ -776,7 +792,7 @@ static void real_gauges(void)
     }
 }
 
-/* ---- tidying --------------------------------------------------------------------------------------------------------- */
+/* ---- tidying ----------------------------------------------------------------------------------------------------- */
 
 static void order_independence(void)
 {
@@ -884,7 +900,8 @@ static void tidy_edges(void)
     for (sites = -1; sites <= 66; sites++) {
         int good = sites >= 1 && sites <= 64;
         uint64_t used = whorl_terms_number(arena[0], 1.0);
-        CHECK_STATUS(whorl_sum_from_terms(&host, sites, arena[0], used, &sum), good ? WHORL_OK : WHORL_BAD_ARGUMENT, &host);
+        CHECK_STATUS(whorl_sum_from_terms(&host, sites, arena[0], used, &sum), good ? WHORL_OK : WHORL_BAD_ARGUMENT,
+                     &host);
     }
     for (sites = 1; sites <= 64; sites++) { /* the last site is in, the next one out */
         uint64_t used = whorl_terms_exchange(arena[0], 0, sites - 1, 1.0);
@@ -922,7 +939,8 @@ static void tidy_edges(void)
 /* Infinity is never returned: sums of equal strings, scaling, adding and multiplying overflow with a status. */
 static void overflow(void)
 {
-    whorl_term big[2] = {{1, 0, 1e308, 0.0}, {1, 0, 1e308, 0.0}}, left[1] = {{1, 0, 1e200, 1e200}}, right[1] = {{0, 1, 1e200, 0}};
+    whorl_term big[2] = {{1, 0, 1e308, 0.0}, {1, 0, 1e308, 0.0}}, left[1] = {{1, 0, 1e200, 1e200}},
+               right[1] = {{0, 1, 1e200, 0}};
     whorl_sum sum = {9, 9, NULL}, a, b, out = {9, 9, NULL};
     CHECK_STATUS(whorl_sum_from_terms(&host, 1, big, 2, &sum), WHORL_NOT_FINITE, &host);
     CHECK(sum.sites == 9 && big[0].re == 1e308 && big[1].re == 1e308);
@@ -930,9 +948,10 @@ static void overflow(void)
     b = made(1, right, 1);
     CHECK_STATUS(whorl_sum_multiply(&host, &a, &b, arena[0], ROOM, &out), WHORL_NOT_FINITE, &host);
     CHECK_STATUS(whorl_sum_commutator(&host, &a, &b, arena[0], ROOM, &out), WHORL_NOT_FINITE, &host);
-    CHECK_STATUS(whorl_sum_add(&host, &a, number(1e300, 0), &b, number(1, 0), arena[0], ROOM, &out), WHORL_NOT_FINITE, &host);
-    CHECK_STATUS(whorl_sum_add(&host, &a, number((double)NAN, 0), &b, number(1, 0), arena[0], ROOM, &out), WHORL_NOT_FINITE,
+    CHECK_STATUS(whorl_sum_add(&host, &a, number(1e300, 0), &b, number(1, 0), arena[0], ROOM, &out), WHORL_NOT_FINITE,
                  &host);
+    CHECK_STATUS(whorl_sum_add(&host, &a, number((double)NAN, 0), &b, number(1, 0), arena[0], ROOM, &out),
+                 WHORL_NOT_FINITE, &host);
     CHECK_STATUS(whorl_sum_scale(&host, &a, number(1e300, 0)), WHORL_NOT_FINITE, &host);
     CHECK_STATUS(whorl_sum_scale(&host, &a, number(0, (double)INFINITY)), WHORL_NOT_FINITE, &host);
     CHECK(a.count == 1 && left[0].re == 1e200 && out.sites == 9);
@@ -942,7 +961,7 @@ static void overflow(void)
     CHECK(a.count == 0); /* underflow to zero drops the term */
 }
 
-/* ---- room, overlap, memory ------------------------------------------------------------------------------------------- */
+/* ---- room, overlap, memory --------------------------------------------------------------------------------------- */
 
 static void room_and_overlap(void)
 {
@@ -956,30 +975,31 @@ static void room_and_overlap(void)
         for (room = 0; room < 3; room++) {
             memset(arena[3], 0x5a, sizeof arena[3]);
             status = which == 0 ? whorl_sum_multiply(&host, &a, &b, room ? arena[3] : NULL, room, &out)
-                   : which == 1 ? whorl_sum_commutator(&host, &a, &b, room ? arena[3] : NULL, room, &out)
-                                : whorl_sum_add(&host, &a, number(1, 0), &b, number(1, 0), room ? arena[3] : NULL, room, &out);
+                     : which == 1
+                         ? whorl_sum_commutator(&host, &a, &b, room ? arena[3] : NULL, room, &out)
+                         : whorl_sum_add(&host, &a, number(1, 0), &b, number(1, 0), room ? arena[3] : NULL, room, &out);
             CHECK_STATUS(status, WHORL_NO_ROOM, &host);
             CHECK(out.sites == 9 && out.terms == NULL && ((unsigned char *)arena[3])[0] == 0x5a);
         }
         need = host.reason.index;
         memset(&full, 0, sizeof full);
-        status = which == 0 ? whorl_sum_multiply(&host, &a, &b, arena[3], need, &full)
-               : which == 1 ? whorl_sum_commutator(&host, &a, &b, arena[3], need, &full)
-                            : whorl_sum_add(&host, &a, number(1, 0), &b, number(1, 0), arena[3], need, &full);
+        status = which == 0   ? whorl_sum_multiply(&host, &a, &b, arena[3], need, &full)
+                 : which == 1 ? whorl_sum_commutator(&host, &a, &b, arena[3], need, &full)
+                              : whorl_sum_add(&host, &a, number(1, 0), &b, number(1, 0), arena[3], need, &full);
         CHECK_STATUS(status, WHORL_OK, &host);
         CHECK(full.count == need && full.terms == arena[3]);
-        status = which == 0 ? whorl_sum_multiply(&host, &a, &b, arena[4], need - 1, &out)
-               : which == 1 ? whorl_sum_commutator(&host, &a, &b, arena[4], need - 1, &out)
-                            : whorl_sum_add(&host, &a, number(1, 0), &b, number(1, 0), arena[4], need - 1, &out);
+        status = which == 0   ? whorl_sum_multiply(&host, &a, &b, arena[4], need - 1, &out)
+                 : which == 1 ? whorl_sum_commutator(&host, &a, &b, arena[4], need - 1, &out)
+                              : whorl_sum_add(&host, &a, number(1, 0), &b, number(1, 0), arena[4], need - 1, &out);
         CHECK_STATUS(status, WHORL_NO_ROOM, &host);
         /* overlap at either end, and unequal sites */
-        status = which == 0 ? whorl_sum_multiply(&host, &a, &b, arena[0] + a.count - 1, ROOM, &out)
-               : which == 1 ? whorl_sum_commutator(&host, &b, &a, arena[0], ROOM, &out)
-                            : whorl_sum_add(&host, &a, number(1, 0), &b, number(1, 0), b.terms + 1, 1, &out);
+        status = which == 0   ? whorl_sum_multiply(&host, &a, &b, arena[0] + a.count - 1, ROOM, &out)
+                 : which == 1 ? whorl_sum_commutator(&host, &b, &a, arena[0], ROOM, &out)
+                              : whorl_sum_add(&host, &a, number(1, 0), &b, number(1, 0), b.terms + 1, 1, &out);
         CHECK_STATUS(status, WHORL_BAD_ARGUMENT, &host);
-        status = which == 0 ? whorl_sum_multiply(&host, &a, &other, arena[4], ROOM, &out)
-               : which == 1 ? whorl_sum_commutator(&host, &a, &other, arena[4], ROOM, &out)
-                            : whorl_sum_add(&host, &a, number(1, 0), &other, number(1, 0), arena[4], ROOM, &out);
+        status = which == 0   ? whorl_sum_multiply(&host, &a, &other, arena[4], ROOM, &out)
+                 : which == 1 ? whorl_sum_commutator(&host, &a, &other, arena[4], ROOM, &out)
+                              : whorl_sum_add(&host, &a, number(1, 0), &other, number(1, 0), arena[4], ROOM, &out);
         CHECK_STATUS(status, WHORL_BAD_ARGUMENT, &host);
         CHECK(out.sites == 9 && out.count == 9);
     }
@@ -1058,7 +1078,7 @@ static void failures(void)
     }
 }
 
-/* ---- many terms ------------------------------------------------------------------------------------------------------ */
+/* ---- many terms -------------------------------------------------------------------------------------------------- */
 
 static double seconds(void)
 {
@@ -1095,7 +1115,8 @@ static void million_terms(void)
 static void many_products(void)
 {
     enum { COUNT = 1700 };
-    whorl_term *ta = (whorl_term *)judge_memory(COUNT, sizeof(whorl_term)), *tb = (whorl_term *)judge_memory(COUNT, sizeof(whorl_term));
+    whorl_term *ta = (whorl_term *)judge_memory(COUNT, sizeof(whorl_term)),
+               *tb = (whorl_term *)judge_memory(COUNT, sizeof(whorl_term));
     whorl_term *wide, *lean, *again;
     whorl_sum a = {0, 0, NULL}, b = {0, 0, NULL}, out = {0, 0, NULL}, split = {0, 0, NULL};
     const uint64_t pairs = (uint64_t)COUNT * COUNT;
@@ -1137,7 +1158,8 @@ static void many_products(void)
 static void classes_write(void)
 {
     enum { COUNT = 1200 };
-    whorl_term *ta = (whorl_term *)judge_memory(2 * COUNT, sizeof(whorl_term)), *tb = (whorl_term *)judge_memory(COUNT, sizeof(whorl_term));
+    whorl_term *ta = (whorl_term *)judge_memory(2 * COUNT, sizeof(whorl_term)),
+               *tb = (whorl_term *)judge_memory(COUNT, sizeof(whorl_term));
     whorl_sum a, b, out = {0, 0, NULL}, want = {0, 0, NULL};
     whorl_term *room = (whorl_term *)judge_memory(8, sizeof(whorl_term));
     uint64_t k;
@@ -1168,7 +1190,8 @@ static void classes_write(void)
     CHECK_STATUS(whorl_sum_multiply(&host, &a, &b, room, 8, &out), WHORL_NO_ROOM, &host);
     CHECK(host.reason.index == 2 * COUNT);
     {
-        whorl_term *many = (whorl_term *)judge_memory(2 * COUNT, sizeof(whorl_term)), *one = (whorl_term *)judge_memory(2 * COUNT, sizeof(whorl_term));
+        whorl_term *many = (whorl_term *)judge_memory(2 * COUNT, sizeof(whorl_term)),
+                   *one = (whorl_term *)judge_memory(2 * COUNT, sizeof(whorl_term));
         whorl_sum lone = b;
         uint64_t at;
         CHECK_STATUS(whorl_sum_multiply(&host, &a, &b, many, 2 * COUNT, &out), WHORL_OK, &host);
@@ -1195,7 +1218,8 @@ static void classes_write(void)
 static void cancelled_sort(void)
 {
     const uint64_t count = 600000;
-    whorl_term *terms = (whorl_term *)judge_memory(count, sizeof(whorl_term)), *whole = (whorl_term *)judge_memory(count, sizeof(whorl_term));
+    whorl_term *terms = (whorl_term *)judge_memory(count, sizeof(whorl_term)),
+               *whole = (whorl_term *)judge_memory(count, sizeof(whorl_term));
     whorl_sum want, sum;
     check_polls polls = {0, 0};
     uint64_t k;
