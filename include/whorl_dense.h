@@ -265,12 +265,13 @@ static void whorli_dense_panels(void *argument, uint64_t block, int32_t worker)
 }
 
 /* Runs small work here and large work on the host's threads: by size, never by their number. */
+#define WHORLI_DENSE_ALONE (UINT64_C(1) << 19) /* updates: some 0.2 ms, where threads begin to pay for their meeting */
 static whorl_status whorli_dense_run(whorl_host *host, whorl_body_function body, void *argument, uint64_t blocks,
                                      uint64_t updates)
 {
     uint64_t block;
     whorl_status status;
-    if (blocks > 1 && whorl_size_multiply(blocks, updates) >= (UINT64_C(1) << 15))
+    if (blocks > 1 && whorl_size_multiply(blocks, updates) >= WHORLI_DENSE_ALONE)
         return whorl_run(host, body, argument, blocks, updates);
     status = whorl_poll(host);
     for (block = 0; status == WHORL_OK && block < blocks; block++)
@@ -510,6 +511,615 @@ whorl_status whorl_dense_tridiagonal(whorl_host *host, uint64_t n, double *diago
     whorli_dense_scale(off, beside, -power);
     status = whorli_dense_iterate(&turns, diagonal, off);
     return status == WHORL_OK ? whorli_dense_unscale(host, diagonal, n, power) : status;
+}
+
+/* ---- >>reduction ----------------------------------------------------------------------------------------------------- */
+
+/*
+ * A = Q T Q^dagger by n - 1 reflections. A column of a matrix is `rows` = n doubles (parts 1) or n real parts followed by n
+ * imaginary ones (parts 2), so that all inner loops are loops over plain doubles; vectors likewise. One pass over the
+ * trailing columns applies the last reflection, A -= v w^dagger + w v^dagger, and multiplies the next, y = A u. It goes by strips
+ * of columns, each with a y of its own; the strips are added in order afterwards.
+ */
+#define WHORLI_DENSE_STRIP 64   /* columns */
+#define WHORLI_DENSE_TILE 128   /* rows of some columns that stay in the first cache; a multiple of 8 */
+#define WHORLI_DENSE_PACK 16    /* reflections that are applied to a column of Q at one go */
+#define WHORLI_DENSE_COLUMNS 16 /* columns of Q in a block of work */
+
+typedef struct whorli_dense {
+    uint64_t n, parts, rows;
+    double *a;
+    double *diagonal;    /* the caller's values */
+    double *off;         /* n */
+    double *factor;      /* of the reflections: n complex numbers, tau */
+    double *u, *v, *w;   /* `rows` each: this reflection, the last one and its partner */
+    double *y;           /* one for each strip */
+    double *pack;        /* WHORLI_DENSE_PACK reflections */
+    double *turns, *buffers;
+    uint64_t step;       /* which column is reduced now */
+    uint64_t pack_first, pack_count;
+} whorli_dense;
+
+/* Measures or carves everything that a call takes. */
+static void whorli_dense_plan(whorl_layout *layout, whorli_dense *work, uint64_t n, uint64_t parts, int32_t vectors)
+{
+    const uint64_t real = sizeof(double), rows = whorl_size_multiply(n, parts);
+    const uint64_t strips = n / WHORLI_DENSE_STRIP + (n % WHORLI_DENSE_STRIP != 0);
+    const uint64_t panels = rows / WHORLI_DENSE_ROWS + (rows % WHORLI_DENSE_ROWS != 0);
+    const uint64_t buffers = panels < WHORLI_DENSE_PANELS ? panels : WHORLI_DENSE_PANELS;
+    memset(work, 0, sizeof *work);
+    work->n = n;
+    work->parts = parts;
+    work->rows = rows;
+    work->off = (double *)whorl_layout_carve(layout, n, real);
+    work->factor = (double *)whorl_layout_carve(layout, whorl_size_multiply(n, 2), real);
+    work->u = (double *)whorl_layout_carve(layout, rows, real);
+    work->v = (double *)whorl_layout_carve(layout, rows, real);
+    work->w = (double *)whorl_layout_carve(layout, rows, real);
+    work->y = (double *)whorl_layout_carve(layout, whorl_size_multiply(strips, rows), real);
+    if (vectors == 0)
+        return;
+    work->pack = (double *)whorl_layout_carve(layout, whorl_size_multiply(rows, WHORLI_DENSE_PACK), real);
+    work->turns = (double *)whorl_layout_carve(layout, whorl_size_multiply(n, 2 * WHORLI_DENSE_SWEEPS), real);
+    work->buffers = (double *)whorl_layout_carve(layout, whorl_size_multiply(n, buffers * WHORLI_DENSE_ROWS), real);
+}
+
+/* Eight lanes that add products in turn, the first lane beginning; count goes on from a multiple of 8. */
+static void whorli_dense_lanes(uint64_t count, const double *WHORLI_RESTRICT x, const double *WHORLI_RESTRICT y,
+                               double *WHORLI_RESTRICT lanes)
+{
+    double sum[8];
+    uint64_t r, l;
+    for (l = 0; l < 8; l++)
+        sum[l] = lanes[l];
+    for (r = 0; r + 8 <= count; r += 8)
+        for (l = 0; l < 8; l++)
+            sum[l] += x[r + l] * y[r + l];
+    for (l = 0; r + l < count; l++)
+        sum[l] += x[r + l] * y[r + l];
+    for (l = 0; l < 8; l++)
+        lanes[l] = sum[l];
+}
+
+/* The same for conj(x) y, x and y with their imaginary parts n further on. */
+static void whorli_dense_lanes_complex(uint64_t count, uint64_t n, const double *WHORLI_RESTRICT x,
+                                       const double *WHORLI_RESTRICT y, double *WHORLI_RESTRICT re,
+                                       double *WHORLI_RESTRICT im)
+{
+    const double *xi = x + n, *yi = y + n;
+    double real[8], imaginary[8];
+    uint64_t r, l;
+    for (l = 0; l < 8; l++) {
+        real[l] = re[l];
+        imaginary[l] = im[l];
+    }
+    for (r = 0; r + 8 <= count; r += 8)
+        for (l = 0; l < 8; l++) {
+            real[l] += x[r + l] * y[r + l] + xi[r + l] * yi[r + l];
+            imaginary[l] += x[r + l] * yi[r + l] - xi[r + l] * y[r + l];
+        }
+    for (l = 0; r + l < count; l++) {
+        real[l] += x[r + l] * y[r + l] + xi[r + l] * yi[r + l];
+        imaginary[l] += x[r + l] * yi[r + l] - xi[r + l] * y[r + l];
+    }
+    for (l = 0; l < 8; l++) {
+        re[l] = real[l];
+        im[l] = imaginary[l];
+    }
+}
+
+static double whorli_dense_lane_sum(const double *lanes)
+{
+    return ((lanes[0] + lanes[4]) + (lanes[2] + lanes[6])) + ((lanes[1] + lanes[5]) + (lanes[3] + lanes[7]));
+}
+
+/* <x, y> over rows first .. n - 1. */
+static whorl_complex whorli_dense_dot(const whorli_dense *work, uint64_t first, const double *x, const double *y)
+{
+    double re[8] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0}, im[8] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0};
+    if (work->parts == 1)
+        whorli_dense_lanes(work->n - first, x + first, y + first, re);
+    else
+        whorli_dense_lanes_complex(work->n - first, work->n, x + first, y + first, re, im);
+    return whorl_complex_of(whorli_dense_lane_sum(re), whorli_dense_lane_sum(im));
+}
+
+/* Element r of a vector or column. */
+static whorl_complex whorli_dense_get(const whorli_dense *work, const double *x, uint64_t r)
+{
+    return whorl_complex_of(x[r], work->parts == 1 ? 0.0 : x[work->n + r]);
+}
+static void whorli_dense_put(const whorli_dense *work, double *x, uint64_t r, whorl_complex value)
+{
+    x[r] = value.re;
+    if (work->parts != 1)
+        x[work->n + r] = value.im;
+}
+
+/* y += factor x over rows first .. n - 1. */
+static void whorli_dense_add(const whorli_dense *work, uint64_t first, whorl_complex factor,
+                             const double *WHORLI_RESTRICT x, double *WHORLI_RESTRICT y)
+{
+    const double *xi = x + work->n;
+    double *yi = y + work->n;
+    uint64_t r;
+    if (work->parts == 1) {
+        for (r = first; r < work->n; r++)
+            y[r] += factor.re * x[r];
+        return;
+    }
+    for (r = first; r < work->n; r++) {
+        double re = x[r], im = xi[r];
+        y[r] += factor.re * re - factor.im * im;
+        yi[r] += factor.re * im + factor.im * re;
+    }
+}
+
+/* What a pass needs of one column c: the elements c of v, w and u. */
+typedef struct whorli_dense_heads {
+    whorl_complex v, w, u;
+} whorli_dense_heads;
+
+/* One element: a - v_r conj(w_c) - w_r conj(v_c). */
+static whorl_complex whorli_dense_updated(whorl_complex a, whorl_complex vr, whorl_complex wr, const whorli_dense_heads *c)
+{
+    a.re -= (vr.re * c->w.re + vr.im * c->w.im) + (wr.re * c->v.re + wr.im * c->v.im);
+    a.im -= (vr.im * c->w.re - vr.re * c->w.im) + (wr.im * c->v.re - wr.re * c->v.im);
+    return a;
+}
+
+/* The upper triangle of a group of columns, down to row `end`, element by element: update, and both parts of y = A u. */
+static void whorli_dense_corner(const whorli_dense *work, uint64_t column, uint64_t end, const whorli_dense_heads *heads,
+                                double *y)
+{
+    uint64_t c, r;
+    for (c = column; c < end; c++)
+        for (r = c; r < end; r++) {
+            double *a = work->a + c * work->rows;
+            const whorli_dense_heads *head = heads + (c - column);
+            whorl_complex x = whorli_dense_updated(whorli_dense_get(work, a, r), whorli_dense_get(work, work->v, r),
+                                                   whorli_dense_get(work, work->w, r), head);
+            whorl_complex to = whorli_dense_get(work, y, r), product;
+            if (r == c)
+                x.im = 0.0;
+            whorli_dense_put(work, a, r, x);
+            product = whorl_complex_multiply(x, head->u);
+            whorli_dense_put(work, y, r, whorl_complex_of(to.re + product.re, to.im + product.im));
+            if (r == c)
+                continue;
+            to = whorli_dense_get(work, y, c);
+            product = whorl_complex_multiply(whorl_complex_of(x.re, -x.im), whorli_dense_get(work, work->u, r));
+            whorli_dense_put(work, y, c, whorl_complex_of(to.re + product.re, to.im + product.im));
+        }
+}
+
+/* A tile of four real columns: update, and y += A u from them. Pointers are to the tile's first row. */
+static void whorli_dense_tile4(uint64_t count, uint64_t n, double *a, const double *WHORLI_RESTRICT v,
+                               const double *WHORLI_RESTRICT w, double *WHORLI_RESTRICT y, const whorli_dense_heads *c)
+{
+    double *WHORLI_RESTRICT a0 = a;
+    double *WHORLI_RESTRICT a1 = a + n;
+    double *WHORLI_RESTRICT a2 = a + 2 * n;
+    double *WHORLI_RESTRICT a3 = a + 3 * n;
+    const double v0 = c[0].v.re, v1 = c[1].v.re, v2 = c[2].v.re, v3 = c[3].v.re;
+    const double w0 = c[0].w.re, w1 = c[1].w.re, w2 = c[2].w.re, w3 = c[3].w.re;
+    const double u0 = c[0].u.re, u1 = c[1].u.re, u2 = c[2].u.re, u3 = c[3].u.re;
+    uint64_t r;
+    for (r = 0; r < count; r++) {
+        double x0 = a0[r] - (v[r] * w0 + w[r] * v0), x1 = a1[r] - (v[r] * w1 + w[r] * v1);
+        double x2 = a2[r] - (v[r] * w2 + w[r] * v2), x3 = a3[r] - (v[r] * w3 + w[r] * v3);
+        a0[r] = x0;
+        a1[r] = x1;
+        a2[r] = x2;
+        a3[r] = x3;
+        y[r] += (x0 * u0 + x1 * u1) + (x2 * u2 + x3 * u3);
+    }
+}
+
+/* A tile of one real column. */
+static void whorli_dense_tile1(uint64_t count, double *WHORLI_RESTRICT a, const double *WHORLI_RESTRICT v,
+                               const double *WHORLI_RESTRICT w, double *WHORLI_RESTRICT y, const whorli_dense_heads *c)
+{
+    const double v0 = c->v.re, w0 = c->w.re, u0 = c->u.re;
+    uint64_t r;
+    for (r = 0; r < count; r++) {
+        double x = a[r] - (v[r] * w0 + w[r] * v0);
+        a[r] = x;
+        y[r] += x * u0;
+    }
+}
+
+/* A tile of one complex column; imaginary parts are n further on. */
+static void whorli_dense_tile_complex(uint64_t count, uint64_t n, double *a, const double *v, const double *w, double *y,
+                                      const whorli_dense_heads *c)
+{
+    double *WHORLI_RESTRICT ar = a;
+    double *WHORLI_RESTRICT ai = a + n;
+    double *WHORLI_RESTRICT yr = y;
+    double *WHORLI_RESTRICT yi = y + n;
+    const double *WHORLI_RESTRICT vr = v;
+    const double *WHORLI_RESTRICT vi = v + n;
+    const double *WHORLI_RESTRICT wr = w;
+    const double *WHORLI_RESTRICT wi = w + n;
+    const double v_re = c->v.re, v_im = c->v.im, w_re = c->w.re, w_im = c->w.im, u_re = c->u.re, u_im = c->u.im;
+    uint64_t r;
+    for (r = 0; r < count; r++) {
+        double re = ar[r] - ((vr[r] * w_re + vi[r] * w_im) + (wr[r] * v_re + wi[r] * v_im));
+        double im = ai[r] - ((vi[r] * w_re - vr[r] * w_im) + (wi[r] * v_re - wr[r] * v_im));
+        ar[r] = re;
+        ai[r] = im;
+        yr[r] += re * u_re - im * u_im;
+        yi[r] += re * u_im + im * u_re;
+    }
+}
+
+/* `group` columns (4 real, or 1) from `column` on: all rows. */
+static void whorli_dense_group(const whorli_dense *work, uint64_t column, uint64_t group, double *y)
+{
+    whorli_dense_heads heads[4];
+    double re[4][8], im[8] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0};
+    double *a = work->a + column * work->rows;
+    uint64_t k, row;
+    memset(re, 0, sizeof re);
+    for (k = 0; k < group; k++) {
+        heads[k].v = whorli_dense_get(work, work->v, column + k);
+        heads[k].w = whorli_dense_get(work, work->w, column + k);
+        heads[k].u = whorli_dense_get(work, work->u, column + k);
+    }
+    whorli_dense_corner(work, column, column + group, heads, y);
+    for (row = column + group; row < work->n; row += WHORLI_DENSE_TILE) {
+        uint64_t count = work->n - row < WHORLI_DENSE_TILE ? work->n - row : WHORLI_DENSE_TILE;
+        if (work->parts != 1) {
+            whorli_dense_tile_complex(count, work->n, a + row, work->v + row, work->w + row, y + row, heads);
+            whorli_dense_lanes_complex(count, work->n, a + row, work->u + row, re[0], im);
+            continue;
+        }
+        if (group == 4)
+            whorli_dense_tile4(count, work->n, a + row, work->v + row, work->w + row, y + row, heads);
+        else
+            whorli_dense_tile1(count, a + row, work->v + row, work->w + row, y + row, heads);
+        for (k = 0; k < group; k++)
+            whorli_dense_lanes(count, a + k * work->n + row, work->u + row, re[k]);
+    }
+    for (k = 0; k < group; k++)
+        y[column + k] += whorli_dense_lane_sum(re[k]);
+    if (work->parts != 1)
+        y[work->n + column] += whorli_dense_lane_sum(im);
+}
+
+/* Block b of a pass: what strip b has of the columns behind `step`. */
+static void whorli_dense_strip(void *argument, uint64_t block, int32_t worker)
+{
+    const whorli_dense *work = (const whorli_dense *)argument;
+    uint64_t strip = (work->step + 1) / WHORLI_DENSE_STRIP + block, column = strip * WHORLI_DENSE_STRIP;
+    uint64_t end = column + WHORLI_DENSE_STRIP < work->n ? column + WHORLI_DENSE_STRIP : work->n, r, part;
+    double *y = work->y + strip * work->rows;
+    (void)worker;
+    if (column < work->step + 1)
+        column = work->step + 1;
+    for (part = 0; part < work->parts; part++)
+        for (r = column; r < work->n; r++)
+            y[part * work->n + r] = 0.0;
+    while (column < end) {
+        uint64_t group = work->parts == 1 && column % 4 == 0 && end - column >= 4 ? 4 : 1;
+        whorli_dense_group(work, column, group, y);
+        column += group;
+    }
+}
+
+/* Adds the strips' y, in order, into the first of them; returns it. */
+static double *whorli_dense_strips_sum(const whorli_dense *work)
+{
+    uint64_t first = (work->step + 1) / WHORLI_DENSE_STRIP, strip, part, r;
+    double *total = work->y + first * work->rows;
+    for (strip = first + 1; strip * WHORLI_DENSE_STRIP < work->n; strip++)
+        for (part = 0; part < work->parts; part++) {
+            const double *from = work->y + strip * work->rows + part * work->n;
+            double *to = total + part * work->n;
+            for (r = strip * WHORLI_DENSE_STRIP; r < work->n; r++)
+                to[r] += from[r];
+        }
+    return total;
+}
+
+/* Applies the last reflection to column `step`. */
+static void whorli_dense_column(const whorli_dense *work)
+{
+    const uint64_t j = work->step;
+    double *a = work->a + j * work->rows;
+    whorl_complex v = whorli_dense_get(work, work->v, j), w = whorli_dense_get(work, work->w, j);
+    whorli_dense_add(work, j, whorl_complex_of(-w.re, w.im), work->v, a);
+    whorli_dense_add(work, j, whorl_complex_of(-v.re, v.im), work->w, a);
+}
+
+/*
+ * The reflection I - tau u u^dagger, u_(j+1) = 1, whose adjoint takes column j below the diagonal to (off_j, 0, ...), off_j real.
+ * Entries are near 1 at most, so what has a square below 2^-900 may be dropped; above that nothing underflows.
+ */
+static void whorli_dense_reflection(const whorli_dense *work)
+{
+    const uint64_t j = work->step;
+    double *a = work->a + j * work->rows, beta;
+    whorl_complex head = whorli_dense_get(work, a, j + 1), tau = {0.0, 0.0}, one = {1.0, 0.0}, scale;
+    double rest = j + 2 < work->n ? whorli_dense_dot(work, j + 2, a, a).re : 0.0;
+    uint64_t r, part;
+    for (part = 0; part < work->parts; part++)
+        for (r = j + 1; r < work->n; r++)
+            work->u[part * work->n + r] = 0.0;
+    work->off[j] = head.re;
+    if (rest + head.im * head.im > whorli_dense_power(-900)) {
+        double size;
+        beta = sqrt(rest + (head.re * head.re + head.im * head.im));
+        beta = head.re > 0.0 ? -beta : beta;
+        tau = whorl_complex_of((beta - head.re) / beta, -head.im / beta);
+        scale = whorl_complex_of(head.re - beta, -head.im);
+        size = scale.re * scale.re + scale.im * scale.im;
+        scale = work->parts == 1 ? whorl_complex_of(1.0 / scale.re, 0.0) : whorl_complex_of(scale.re / size, scale.im / size);
+        whorli_dense_add(work, j + 1, scale, a, work->u);
+        work->off[j] = beta;
+    }
+    whorli_dense_put(work, work->u, j + 1, one);
+    for (part = 0; part < work->parts; part++)
+        memcpy(a + part * work->n + j + 1, work->u + part * work->n + j + 1, (size_t)(work->n - j - 1) * sizeof(double));
+    work->factor[2 * j] = tau.re;
+    work->factor[2 * j + 1] = tau.im;
+}
+
+/* Diagonal and off-diagonal of T; reflections stay below the diagonal of a. */
+static whorl_status whorli_dense_reduce(whorl_host *host, whorli_dense *work)
+{
+    uint64_t j, r;
+    for (r = 0; r < work->rows; r++)
+        work->u[r] = work->v[r] = work->w[r] = 0.0;
+    for (j = 0; j < work->n; j++) {
+        uint64_t strips = (work->n - 1) / WHORLI_DENSE_STRIP - (j + 1) / WHORLI_DENSE_STRIP + 1;
+        whorl_complex tau;
+        double *y, square;
+        whorl_status status;
+        work->step = j;
+        whorli_dense_column(work);
+        work->diagonal[j] = work->a[j * work->rows + j];
+        if (j + 1 == work->n)
+            break;
+        whorl_stage(host, "reduction to tridiagonal form", j, work->n);
+        whorli_dense_reflection(work);
+        status = whorli_dense_run(host, whorli_dense_strip, work, strips, WHORLI_DENSE_STRIP * (work->rows - j));
+        if (status != WHORL_OK)
+            return status;
+        /* w = tau y - 1/2 |tau|^2 <u, y> u, <u, y> real; then (v, w) = (u, w) */
+        y = whorli_dense_strips_sum(work);
+        tau = whorl_complex_of(work->factor[2 * j], work->factor[2 * j + 1]);
+        square = (tau.re * tau.re + tau.im * tau.im) * whorli_dense_dot(work, j + 1, work->u, y).re;
+        for (r = 0; r < work->rows; r++)
+            work->w[r] = 0.0;
+        whorli_dense_add(work, j + 1, tau, y, work->w);
+        whorli_dense_add(work, j + 1, whorl_complex_of(-0.5 * square, 0.0), work->u, work->w);
+        y = work->v;
+        work->v = work->u;
+        work->u = y;
+    }
+    return WHORL_OK;
+}
+
+/* Block b of forming Q: some columns behind the pack's first, each through all reflections of the pack, last one first. */
+static void whorli_dense_unfold(void *argument, uint64_t block, int32_t worker)
+{
+    const whorli_dense *work = (const whorli_dense *)argument;
+    uint64_t column = work->pack_first + 1 + block * WHORLI_DENSE_COLUMNS, end = column + WHORLI_DENSE_COLUMNS, k;
+    (void)worker;
+    for (; column < end && column < work->n; column++) {
+        double *q = work->a + column * work->rows;
+        for (k = work->pack_count; k-- > 0;) {
+            const double *u = work->pack + k * work->rows;
+            uint64_t j = work->pack_first + k;
+            whorl_complex tau = whorl_complex_of(-work->factor[2 * j], -work->factor[2 * j + 1]);
+            if (tau.re != 0.0 || tau.im != 0.0)
+                whorli_dense_add(work, j + 1, whorl_complex_multiply(tau, whorli_dense_dot(work, j + 1, u, q)), u, q);
+        }
+    }
+}
+
+/*
+ * a becomes Q = H_0 H_1 ... H_(n-2), from the last reflection to the first: behind H_j only rows and columns from j + 1 on
+ * are more than the unit matrix, while the reflections before it stand in columns before it.
+ */
+static whorl_status whorli_dense_form(whorl_host *host, whorli_dense *work)
+{
+    uint64_t first, done = work->n - 1, column, r; /* columns above `done` are formed */
+    for (;;) {
+        whorl_status status;
+        first = done < WHORLI_DENSE_PACK ? 0 : done - WHORLI_DENSE_PACK;
+        work->pack_first = first;
+        work->pack_count = done - first;
+        memcpy(work->pack, work->a + first * work->rows, (size_t)(work->pack_count * work->rows) * sizeof(double));
+        for (column = first == 0 ? 0 : first + 1; column <= done; column++) {
+            double *q = work->a + column * work->rows;
+            for (r = 0; r < work->rows; r++)
+                q[r] = 0.0;
+            q[column] = 1.0;
+        }
+        for (column = done + 1; column < work->n; column++) /* new rows of the unit matrix */
+            for (r = first; r <= done; r++)
+                whorli_dense_put(work, work->a + column * work->rows, r, whorl_complex_of(0.0, 0.0));
+        if (work->pack_count == 0)
+            return WHORL_OK;
+        whorl_stage(host, "vectors from the reflections", work->n - done, work->n);
+        status = whorli_dense_run(host, whorli_dense_unfold, work,
+                                  (work->n - first - 1 + WHORLI_DENSE_COLUMNS - 1) / WHORLI_DENSE_COLUMNS,
+                                  WHORLI_DENSE_COLUMNS * WHORLI_DENSE_PACK * (work->rows - first));
+        if (status != WHORL_OK || first == 0)
+            return status;
+        done = first;
+    }
+}
+
+/* ---- >>spectra ------------------------------------------------------------------------------------------------------- */
+
+/* Columns from interleaved to parts one behind the other, and back (`apart` 0); `room` holds one column. */
+static void whorli_dense_split(uint64_t n, double *a, double *room, int32_t apart)
+{
+    uint64_t c, r;
+    for (c = 0; c < n; c++) {
+        double *column = a + 2 * n * c;
+        memcpy(room, column, (size_t)(2 * n) * sizeof(double));
+        for (r = 0; r < n; r++)
+            if (apart) {
+                column[r] = room[2 * r];
+                column[n + r] = room[2 * r + 1];
+            } else {
+                column[2 * r] = room[r];
+                column[2 * r + 1] = room[n + r];
+            }
+    }
+}
+
+/* Makes the first component of at least half the largest modulus real and positive in every column. */
+static void whorli_dense_phases(const whorli_dense *work)
+{
+    uint64_t c, r, part;
+    for (c = 0; c < work->n; c++) {
+        double *q = work->a + c * work->rows, most = 0.0, size = 0.0;
+        whorl_complex x = {1.0, 0.0};
+        for (r = 0; r < work->n; r++) {
+            x = whorli_dense_get(work, q, r);
+            size = x.re * x.re + x.im * x.im;
+            most = size > most ? size : most;
+        }
+        for (r = 0; r < work->n; r++) {
+            x = whorli_dense_get(work, q, r);
+            size = x.re * x.re + x.im * x.im;
+            if (size >= 0.25 * most)
+                break;
+        }
+        if (work->parts == 1 || x.im == 0.0) {
+            for (part = 0; x.re < 0.0 && part < work->rows; part++)
+                q[part] = -q[part];
+            continue;
+        }
+        size = sqrt(size);
+        x = whorl_complex_of(x.re / size, -x.im / size);
+        for (part = 0; part < work->n; part++)
+            whorli_dense_put(work, q, part, whorl_complex_multiply(x, whorli_dense_get(work, q, part)));
+        whorli_dense_put(work, q, r, whorl_complex_of(size, 0.0));
+    }
+}
+
+/* The largest modulus of the lower triangle in *most; the index of an entry that is not finite, or WHORL_NONE. */
+static uint64_t whorli_dense_inspect(uint64_t n, uint64_t parts, const double *a, double *most)
+{
+    uint64_t c, wrong;
+    *most = 0.0;
+    for (c = 0; c < n; c++) {
+        const double *column = a + parts * (n * c + c);
+        wrong = whorl_is_finite(column[0]) ? whorli_dense_wrong(column + parts, parts * (n - c - 1)) : 0;
+        if (wrong != WHORL_NONE)
+            return n * c + c + (whorl_is_finite(column[0]) ? 1 + wrong / parts : 0);
+        *most = whorli_dense_largest(column, 1, *most);
+        *most = whorli_dense_largest(column + parts, parts * (n - c - 1), *most);
+    }
+    return WHORL_NONE;
+}
+
+/* The scratch of one call, in bytes of its block. */
+static uint64_t whorli_dense_bytes(uint64_t n, uint64_t parts, int32_t vectors)
+{
+    whorl_layout layout = {NULL, 0};
+    whorli_dense work;
+    if (whorl_size_multiply(whorl_size_multiply(n, n), parts * sizeof(double)) >= (UINT64_C(1) << 62))
+        return WHORL_NONE;
+    whorli_dense_plan(&layout, &work, n, parts, vectors);
+    return layout.bytes;
+}
+
+/* T's eigenvalues, and a times its eigenvectors. */
+static whorl_status whorli_dense_rotate_all(whorl_host *host, const whorli_dense *work, int32_t vectors)
+{
+    whorli_dense_turns turns;
+    memset(&turns, 0, sizeof turns);
+    turns.host = host;
+    turns.n = work->n;
+    turns.m = work->rows;
+    turns.z = vectors ? work->a : NULL;
+    turns.turns = work->turns;
+    turns.buffers = work->buffers;
+    whorl_stage(host, "QL iteration", 0, 0);
+    return whorli_dense_iterate(&turns, work->diagonal, work->off);
+}
+
+/* Everything between the scaling. */
+static whorl_status whorli_dense_solve(whorl_host *host, whorli_dense *work, int32_t vectors)
+{
+    whorl_status status;
+    if (work->parts != 1)
+        whorli_dense_split(work->n, work->a, work->u, 1);
+    status = whorli_dense_reduce(host, work);
+    if (status == WHORL_OK && vectors)
+        status = whorli_dense_form(host, work);
+    if (status == WHORL_OK)
+        status = whorli_dense_rotate_all(host, work, vectors);
+    if (status != WHORL_OK || !vectors)
+        return status;
+    whorli_dense_phases(work);
+    if (work->parts != 1)
+        whorli_dense_split(work->n, work->a, work->u, 0);
+    return WHORL_OK;
+}
+
+/* Real for parts 1, Hermitian for parts 2. */
+static whorl_status whorli_dense_spectrum(whorl_host *host, uint64_t n, uint64_t parts, double *a, double *values,
+                                          int32_t vectors)
+{
+    whorl_layout layout = {NULL, 0};
+    whorl_block block;
+    whorli_dense work;
+    whorl_status status;
+    double most;
+    uint64_t wrong, c;
+    int32_t power;
+    if (n > 0 && (a == NULL || values == NULL))
+        return whorl_fail(host, WHORL_BAD_ARGUMENT, "the matrix or the array for its eigenvalues is NULL: give both");
+    layout.bytes = whorli_dense_bytes(n, parts, vectors);
+    if (layout.bytes == WHORL_NONE)
+        return whorl_fail(host, WHORL_TOO_LARGE, "the matrix exceeds the address space: n is wrong");
+    wrong = whorli_dense_inspect(n, parts, a, &most);
+    if (wrong != WHORL_NONE)
+        return whorli_dense_not_finite(host, wrong, "the matrix has an entry that is NaN or infinite: see its index");
+    if (n == 0)
+        return WHORL_OK;
+    status = whorl_layout_take(host, &layout, &block);
+    if (status != WHORL_OK)
+        return status;
+    whorli_dense_plan(&layout, &work, n, parts, vectors);
+    work.a = a;
+    work.diagonal = values;
+    power = most > 0.0 ? whorli_dense_exponent(most) : 0;
+    for (c = 0; c < n; c++)
+        whorli_dense_scale(a + parts * (n * c + c), parts * (n - c), -power);
+    status = whorli_dense_solve(host, &work, vectors);
+    if (status == WHORL_OK)
+        status = whorli_dense_unscale(host, values, n, power);
+    whorl_block_give(host, &block);
+    return status;
+}
+
+whorl_status whorl_dense_symmetric(whorl_host *host, uint64_t n, double *a, double *values, int32_t vectors)
+{
+    return whorli_dense_spectrum(host, n, 1, a, values, vectors);
+}
+
+whorl_status whorl_dense_hermitian(whorl_host *host, uint64_t n, double *a, double *values, int32_t vectors)
+{
+    return whorli_dense_spectrum(host, n, 2, a, values, vectors);
+}
+
+uint64_t whorl_dense_symmetric_bytes(uint64_t n, int32_t vectors)
+{
+    return n == 0 ? 0 : whorl_block_bytes(whorli_dense_bytes(n, 1, vectors));
+}
+
+uint64_t whorl_dense_hermitian_bytes(uint64_t n, int32_t vectors)
+{
+    return n == 0 ? 0 : whorl_block_bytes(whorli_dense_bytes(n, 2, vectors));
 }
 
 WHORLI_ARITHMETIC_END
