@@ -157,7 +157,7 @@ static void test_reference_clusters(void)
 
 /*
  * Orders of groups, and dimensions of fully symmetric blocks at S^z = 0 by Burnside's lemma from the cycles of all
- * permutations (rows blk_ of 13_counting.tsv, closed form): a configuration fixed by a permutation is constant on cycles;
+ * permutations (rows blk_ of 13_counting.tsv, closed form): a fixed configuration is constant on cycles;
  * followed by spin inversion it alternates along them.
  */
 static void check_blocks(whorl_host *host, const char *name, whorl_lattice_desc desc)
