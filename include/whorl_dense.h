@@ -1,32 +1,36 @@
 /*
- * whorl_dense.h 0.1.0: whole spectra of small matrices, real symmetric and complex Hermitian, with or without vectors, and
- * the tridiagonal problem that Krylov methods end in.
+ * whorl_dense.h 0.1.0: whole spectra of small matrices, real symmetric and complex Hermitian, with or without vectors,
+ * and the tridiagonal problem that Krylov methods end in.
  *
- * Matrices are full n x n arrays, column by column (element (r, c) at r + n c), complex ones interleaved; only the lower
- * triangle is read. Eigenvalues come ascending. Own code: reduction to tridiagonal form by reflections, then the implicit
- * QL iteration.
+ * Matrices are full n x n arrays, column by column (element (r, c) at r + n c), complex ones interleaved; only the
+ * lower triangle is read. Eigenvalues come ascending. Own code: reduction to tridiagonal form by reflections, then the
+ * implicit QL iteration.
  *
- *     double a[9] = {2, -1, 0, 0, 2, -1, 0, 0, 2}, values[3];              (lower triangle of 2, -1 Toeplitz)
+ *     double a[9] = {2, -1, 0, 0, 2, -1, 0, 0, 2}, values[3];           (the lower triangle counts)
  *     if (whorl_dense_symmetric(&host, 3, a, values, 1) == WHORL_OK)
- *         use(values[0], a);                                              (2 - sqrt 2, and its vector in a[0..2])
+ *         use(values[0], a);                                           (2 - sqrt 2, its vector in a[0 .. 3))
  *
  * It does not: solve for some of the levels only (whorl_lanczos.h), nor non-symmetric or generalised problems.
  *
- * Accuracy: ||H v - l v|| and ||V'V - 1|| stay below a few n eps ||H|| and n eps; eigenvalues are right to n eps ||H||, not
- * each to its own last digit. Matrices are scaled by a power of two first, so any finite entries work.
- * Memory: one scratch block a call, announced by the _bytes functions; the vectors replace the matrix. 4/3 n^3
- * multiplications and as many additions for values (four times that for Hermitian matrices), some 5 n^3 for vectors.
- * Threads: work is spread over the host's threads; bits do not depend on their number. With and without vectors the values
- * have the same bits.
- * Errors: statuses of whorl_core.h; what leaves with WHORL_BAD_ARGUMENT, WHORL_NOT_FINITE (in the input), WHORL_TOO_LARGE,
- * WHORL_OVER_LIMIT or WHORL_NO_MEMORY has touched nothing; after WHORL_CANCELLED and WHORL_NO_CONVERGENCE the contents of
- * matrix and values are unspecified.
- * Options (where the implementation is compiled): WHORL_USE_LAPACK hands the matrices to dsyevd and zheevd (link LAPACK with 32-bit
- * integers). That suspends four promises for these two calls: bits equal across builds, threads and machines; a cancel in mid-work
- * (polled only before and after); no malloc but the host's (a BLAS may take its own); the choice of threads by the host.
- * Methods: A. S. Householder, J. ACM 5, 339 (1958); R. S. Martin, C. Reinsch, J. H. Wilkinson, Numer. Math. 11, 181 (1968);
- * A. Dubrulle, R. S. Martin, J. H. Wilkinson, Numer. Math. 12, 377 (1968); the order of rotations in waves: F. G. Van Zee,
- * R. A. van de Geijn, G. Quintana-Orti, ACM Trans. Math. Softw. 40, 18 (2014).
+ * Accuracy: ||H v - l v|| and ||V'V - 1|| stay below a few n eps ||H|| and n eps; eigenvalues are right to n eps ||H||,
+ * not each to its own last digit. Matrices are scaled by a power of two first, so any finite entries work.
+ * Memory: one scratch block a call, announced by the _bytes functions; the vectors replace the matrix.
+ * Cost: 4/3 n^3 multiplications and additions each for values (four times that for Hermitian matrices); vectors cost 5
+ * to 8 times as much again.
+ * Threads: large matrices are worked on by the host's threads; bits do not depend on their number. Values have the same
+ * bits with and without vectors.
+ * Errors: statuses of whorl_core.h. WHORL_BAD_ARGUMENT, WHORL_NOT_FINITE in the input, WHORL_TOO_LARGE,
+ * WHORL_OVER_LIMIT and WHORL_NO_MEMORY have touched nothing; after WHORL_CANCELLED, WHORL_NO_CONVERGENCE, or
+ * WHORL_NOT_FINITE for an eigenvalue the contents of matrix and values are unspecified.
+ *
+ * Option (where the implementation is compiled): WHORL_USE_LAPACK hands the matrices to dsyevd and zheevd; link a
+ * LAPACK with 32-bit integers. That suspends, for these two calls: equal bits across builds, machines and threads, and
+ * of values with and without vectors; a cancel in mid-work (polls stand before and after); the promise that an arena is
+ * enough (a BLAS may take memory of its own); threads chosen by the host.
+ *
+ * Methods: A. S. Householder, J. ACM 5, 339 (1958); R. S. Martin, C. Reinsch, J. H. Wilkinson, Numer. Math. 11, 181
+ * (1968); A. Dubrulle, R. S. Martin, J. H. Wilkinson, Numer. Math. 12, 377 (1968); the order of rotations in waves:
+ * F. G. Van Zee, R. A. van de Geijn, G. Quintana-Orti, ACM Trans. Math. Softw. 40, 18 (2014).
  */
 #include "whorl_core.h"
 
@@ -41,13 +45,13 @@
 WHORLI_C_BEGIN
 WHORLI_ARITHMETIC_BEGIN
 
-/* ---- whole spectra --------------------------------------------------------------------------------------------------- */
+/* ---- whole spectra ----------------------------------------------------------------------------------------------- */
 
 /*
  * All eigenvalues of the real symmetric matrix a (n x n doubles, column by column, lower triangle read, all of it
  * overwritten), ascending in values[0 .. n). With vectors != 0, a becomes the orthonormal eigenvectors, column k to
- * values[k]; otherwise its contents are lost. Sign of a vector: its first component of at least half the largest modulus is
- * positive. n = 0 is legal.
+ * values[k]; otherwise its contents are lost. Sign of a vector: its first component of at least half the largest
+ * modulus is positive. n = 0 is legal.
  * Errors: WHORL_BAD_ARGUMENT (NULL), WHORL_NOT_FINITE (reason.index = r + n c of the entry; or an eigenvalue exceeds
  * the largest double), WHORL_TOO_LARGE, WHORL_OVER_LIMIT, WHORL_NO_MEMORY, WHORL_CANCELLED, WHORL_NO_CONVERGENCE.
  * Cost: O(n^3), see above.
@@ -55,24 +59,25 @@ WHORLI_ARITHMETIC_BEGIN
 WHORL_API whorl_status whorl_dense_symmetric(whorl_host *host, uint64_t n, double *a, double *values, int32_t vectors);
 
 /*
- * The same for a complex Hermitian matrix: a has n x n interleaved complex numbers (2 n n doubles); imaginary parts on the
- * diagonal are not read. The component named above is made real and positive.
+ * The same for a complex Hermitian matrix: a has n x n interleaved complex numbers (2 n n doubles); imaginary parts on
+ * the diagonal are not read. The component named above is made real and positive.
  */
 WHORL_API whorl_status whorl_dense_hermitian(whorl_host *host, uint64_t n, double *a, double *values, int32_t vectors);
 
-/* The bytes that the two calls take from the host, exactly, for any number of threads; UINT64_MAX where n is too large. */
+/* The bytes that these two take from the host, exactly, for any number of threads; UINT64_MAX where n is too large. */
 WHORL_API uint64_t whorl_dense_symmetric_bytes(uint64_t n, int32_t vectors);
 WHORL_API uint64_t whorl_dense_hermitian_bytes(uint64_t n, int32_t vectors);
 
-/* ---- tridiagonal ----------------------------------------------------------------------------------------------------- */
+/* ---- tridiagonal ------------------------------------------------------------------------------------------------- */
 
 /*
  * All eigenvalues of the symmetric tridiagonal matrix with diagonal[0 .. n) and off[0 .. n-1) beside it: ascending in
- * diagonal; off is destroyed. With z not NULL (m rows, n columns, column by column), z is multiplied from the right by the
- * eigenvectors: begin with the unit matrix to get them, with one row of it for their first components, with a basis for
- * vectors in the basis' space (complex ones: m counts real numbers). Takes no memory.
- * Errors: WHORL_BAD_ARGUMENT (NULL), WHORL_NOT_FINITE (reason.index: of diagonal, or n + that of off; nothing is touched
- * then), WHORL_CANCELLED, WHORL_NO_CONVERGENCE. Cost: about 3/4 n^2 rotations of m rows, 20 n^2 operations without z.
+ * diagonal; off is destroyed. With z not NULL (m rows, n columns, column by column), z is multiplied from the right by
+ * the eigenvectors: begin with the unit matrix to get them, with one row of it for their first components, with a basis
+ * for vectors in the basis' space (complex ones: m counts real numbers). Takes no memory; signs as they come.
+ * Errors: WHORL_BAD_ARGUMENT (NULL), WHORL_NOT_FINITE (reason.index: of diagonal, or n + that of off; nothing is
+ * touched then), WHORL_CANCELLED, WHORL_NO_CONVERGENCE. Cost: some n^2 rotations of m rows, 30 n^2 operations
+ * without z.
  */
 WHORL_API whorl_status whorl_dense_tridiagonal(whorl_host *host, uint64_t n, double *diagonal, double *off, double *z,
                                                uint64_t m);
@@ -81,7 +86,7 @@ WHORLI_ARITHMETIC_END
 WHORLI_C_END
 #endif /* WHORL_DENSE_INCLUDED */
 
-/* ==== implementation ================================================================================================== */
+/* ==== implementation ============================================================================================== */
 #if defined(WHORL_IMPLEMENTATION) && !defined(WHORL_DENSE_IMPLEMENTED)
 #define WHORL_DENSE_IMPLEMENTED
 
@@ -91,7 +96,7 @@ WHORLI_C_END
 WHORLI_C_BEGIN
 WHORLI_ARITHMETIC_BEGIN
 
-/* ---- >>scaling ------------------------------------------------------------------------------------------------------- */
+/* ---- >>scaling --------------------------------------------------------------------------------------------------- */
 
 /* 2^power, -1022 <= power <= 1023, from its bits. */
 static double whorli_dense_power(int32_t power)
@@ -161,15 +166,15 @@ static whorl_status whorli_dense_unscale(whorl_host *host, double *values, uint6
     wrong = whorli_dense_wrong(values, n);
     if (wrong == WHORL_NONE)
         return WHORL_OK;
-    return whorli_dense_not_finite(host, wrong, "an eigenvalue exceeds the largest double: choose a larger unit of energy");
+    return whorli_dense_not_finite(host, wrong, "an eigenvalue exceeds the largest double: use a larger unit");
 }
 
-/* ---- >>rotations ----------------------------------------------------------------------------------------------------- */
+/* ---- >>rotations ------------------------------------------------------------------------------------------------- */
 
 /*
- * The QL iteration rotates neighbouring columns of z: (z_j, z_j+1) becomes (c z_j - s z_j+1, s z_j + c z_j+1), a sweep does
- * so for a range of j in descending (order +1) or ascending (order -1) sequence. With `turns` the rotations of up to
- * WHORLI_DENSE_SWEEPS sweeps are kept and applied together, in an order that keeps each column in cache for many
+ * The QL iteration rotates neighbouring columns of z: (z_j, z_j+1) becomes (c z_j - s z_j+1, s z_j + c z_j+1). A sweep
+ * does so for a range of j in descending (order +1) or ascending (order -1) sequence. With `turns` the rotations of up
+ * to WHORLI_DENSE_SWEEPS sweeps are kept and applied together, in an order that keeps each column in cache for many
  * rotations; elements see the same operations either way, so the bits are the same.
  */
 #define WHORLI_DENSE_SWEEPS 48 /* kept before they are applied */
@@ -189,7 +194,8 @@ typedef struct whorli_dense_turns {
     uint64_t updates; /* since the last poll */
 } whorli_dense_turns;
 
-static void whorli_dense_rotate(uint64_t count, double *WHORLI_RESTRICT a, double *WHORLI_RESTRICT b, double c, double s)
+static void whorli_dense_rotate(uint64_t count, double *WHORLI_RESTRICT a, double *WHORLI_RESTRICT b, double c,
+                                double s)
 {
     uint64_t r;
     for (r = 0; r < count; r++) {
@@ -217,7 +223,8 @@ static void whorli_dense_rotate_panel(double *a, double c, double s)
  * rotations j - 1, j, j + 1 of sweep p - 1 done before. In front f sweep p does column f + p (order +1, f descending)
  * or f - p (order -1, f ascending), p ascending: that is enough.
  */
-static void whorli_dense_wave(const whorli_dense_turns *turns, uint64_t first, uint64_t count, uint64_t base, double *panel)
+static void whorli_dense_wave(const whorli_dense_turns *turns, uint64_t first, uint64_t count, uint64_t base,
+                              double *panel)
 {
     int64_t order = turns->order, from = 0, to = 0, front;
     uint64_t p;
@@ -256,9 +263,10 @@ static void whorli_dense_panels(void *argument, uint64_t block, int32_t worker)
             for (r = rows; r < WHORLI_DENSE_ROWS; r++)
                 to[r] = 0.0;
         }
-        for (p = 0; p < turns->count; p += WHORLI_DENSE_WAVE)
-            whorli_dense_wave(turns, p, turns->count - p < WHORLI_DENSE_WAVE ? turns->count - p : WHORLI_DENSE_WAVE, low,
-                              panel);
+        for (p = 0; p < turns->count; p += WHORLI_DENSE_WAVE) {
+            uint64_t left = turns->count - p;
+            whorli_dense_wave(turns, p, left < WHORLI_DENSE_WAVE ? left : WHORLI_DENSE_WAVE, low, panel);
+        }
         for (j = low; j <= high + 1; j++)
             memcpy(turns->z + j * turns->m + row, panel + (j - low) * WHORLI_DENSE_ROWS, (size_t)rows * sizeof(double));
     }
@@ -332,7 +340,7 @@ static whorl_status whorli_dense_sweep_end(whorli_dense_turns *turns, uint64_t l
     return whorl_poll(turns->host);
 }
 
-/* ---- >>tridiagonal --------------------------------------------------------------------------------------------------- */
+/* ---- >>tridiagonal ----------------------------------------------------------------------------------------------- */
 
 /* sqrt(x^2 + y^2) where the squares may leave the doubles. */
 static double whorli_dense_length(double x, double y)
@@ -364,7 +372,8 @@ typedef struct whorli_dense_block {
 } whorli_dense_block;
 
 /* One implicit QL sweep over positions l .. m with Wilkinson's shift (Dubrulle, Martin and Wilkinson 1968). */
-static whorl_status whorli_dense_sweep(whorli_dense_turns *turns, const whorli_dense_block *block, uint64_t l, uint64_t m)
+static whorl_status whorli_dense_sweep(whorli_dense_turns *turns, const whorli_dense_block *block, uint64_t l,
+                                       uint64_t m)
 {
     const int64_t step = block->order, top = step * (int64_t)l;
     double *d = block->d, *e = block->e;
@@ -428,7 +437,7 @@ static whorl_status whorli_dense_decouple(whorli_dense_turns *turns, double *dia
         }
         if ((*sweeps_left)-- == 0)
             return whorl_fail(turns->host, WHORL_NO_CONVERGENCE,
-                              "the QL iteration did not converge: check that the arithmetic is IEEE double (whorl_arithmetic)");
+                              "the QL iteration did not converge: check by whorl_arithmetic() that doubles are IEEE");
         status = whorli_dense_sweep(turns, &block, l, m);
         if (status != WHORL_OK)
             return status;
@@ -499,7 +508,7 @@ whorl_status whorl_dense_tridiagonal(whorl_host *host, uint64_t n, double *diago
         wrong = wrong == WHORL_NONE ? wrong : wrong + n;
     }
     if (wrong != WHORL_NONE)
-        return whorli_dense_not_finite(host, wrong, "the tridiagonal matrix has an entry that is NaN or infinite: see its index");
+        return whorli_dense_not_finite(host, wrong, "an entry of the tridiagonal is NaN or infinite: see its index");
     memset(&turns, 0, sizeof turns);
     turns.host = host;
     turns.n = n;
@@ -513,32 +522,169 @@ whorl_status whorl_dense_tridiagonal(whorl_host *host, uint64_t n, double *diago
     return status == WHORL_OK ? whorli_dense_unscale(host, diagonal, n, power) : status;
 }
 
-/* ---- >>reduction ----------------------------------------------------------------------------------------------------- */
+/* ---- >>vectors --------------------------------------------------------------------------------------------------- */
 
 /*
- * A = Q T Q^dagger by n - 1 reflections. A column of a matrix is `rows` = n doubles (parts 1) or n real parts followed by n
- * imaginary ones (parts 2), so that all inner loops are loops over plain doubles; vectors likewise. One pass over the
- * trailing columns applies the last reflection, A -= v w^dagger + w v^dagger, and multiplies the next, y = A u. It goes by strips
- * of columns, each with a y of its own; the strips are added in order afterwards.
+ * One call at work. A column of a matrix is `rows` = n doubles (parts 1) or n real parts followed by n imaginary ones
+ * (parts 2), so that all inner loops are loops over plain doubles; vectors likewise.
+ */
+typedef struct whorli_dense {
+    uint64_t n, parts, rows;
+    double *a;
+    double *diagonal; /* the caller's values */
+    double *u;        /* `rows`: the reflection at work, or room for a column */
+#ifdef WHORL_USE_LAPACK
+    double *room, *reals;
+    int *integers, room_count, real_count, integer_count;
+#else
+    double *off;             /* n */
+    double *factor;          /* tau of the reflections: n complex numbers */
+    double *v, *w;           /* `rows` each: the last reflection and its partner */
+    double *y;               /* `rows` for each strip */
+    double *pack;            /* WHORLI_DENSE_PACK reflections */
+    double *turns, *buffers; /* see whorli_dense_turns */
+    uint64_t step;           /* the column that is reduced now */
+    uint64_t pack_first, pack_count;
+#endif
+} whorli_dense;
+
+/* Element r of a vector or column. */
+static whorl_complex whorli_dense_get(const whorli_dense *work, const double *x, uint64_t r)
+{
+    return whorl_complex_of(x[r], work->parts == 1 ? 0.0 : x[work->n + r]);
+}
+static void whorli_dense_put(const whorli_dense *work, double *x, uint64_t r, whorl_complex value)
+{
+    x[r] = value.re;
+    if (work->parts != 1)
+        x[work->n + r] = value.im;
+}
+
+/* Columns from interleaved to parts one behind the other, and back (`apart` 0); `room` holds one column. */
+static void whorli_dense_split(uint64_t n, double *a, double *room, int32_t apart)
+{
+    uint64_t c, r;
+    for (c = 0; c < n; c++) {
+        double *column = a + 2 * n * c;
+        memcpy(room, column, (size_t)(2 * n) * sizeof(double));
+        for (r = 0; r < n; r++)
+            if (apart) {
+                column[r] = room[2 * r];
+                column[n + r] = room[2 * r + 1];
+            } else {
+                column[2 * r] = room[r];
+                column[2 * r + 1] = room[n + r];
+            }
+    }
+}
+
+/* Makes the first component of at least half the largest modulus real and positive in every column. */
+static void whorli_dense_phases(const whorli_dense *work)
+{
+    uint64_t c, r, part;
+    for (c = 0; c < work->n; c++) {
+        double *q = work->a + c * work->rows, most = 0.0, size = 0.0;
+        whorl_complex x = {1.0, 0.0};
+        for (r = 0; r < work->n; r++) {
+            x = whorli_dense_get(work, q, r);
+            size = x.re * x.re + x.im * x.im;
+            most = size > most ? size : most;
+        }
+        for (r = 0; r < work->n; r++) {
+            x = whorli_dense_get(work, q, r);
+            size = x.re * x.re + x.im * x.im;
+            if (size >= 0.25 * most)
+                break;
+        }
+        if (work->parts == 1 || x.im == 0.0) {
+            for (part = 0; x.re < 0.0 && part < work->rows; part++)
+                q[part] = -q[part];
+            continue;
+        }
+        size = sqrt(size);
+        x = whorl_complex_of(x.re / size, -x.im / size);
+        for (part = 0; part < work->n; part++)
+            whorli_dense_put(work, q, part, whorl_complex_multiply(x, whorli_dense_get(work, q, part)));
+        whorli_dense_put(work, q, r, whorl_complex_of(size, 0.0));
+    }
+}
+
+#ifdef WHORL_USE_LAPACK
+
+/* ---- >>LAPACK ---------------------------------------------------------------------------------------------------- */
+
+extern void dsyevd_(const char *job, const char *half, const int *n, double *a, const int *stride, double *values,
+                    double *room, const int *room_count, int *integers, const int *integer_count, int *info);
+extern void zheevd_(const char *job, const char *half, const int *n, double *a, const int *stride, double *values,
+                    double *room, const int *room_count, double *reals, const int *real_count, int *integers,
+                    const int *integer_count, int *info);
+
+/* The arrays of dsyevd (`room` counts doubles) and zheevd (complex numbers), as their manual pages say. */
+static void whorli_dense_plan(whorl_layout *layout, whorli_dense *work, uint64_t n, uint64_t parts, int32_t vectors)
+{
+    uint64_t room, reals = 0, integers = vectors ? 3 + 5 * n : 1;
+    memset(work, 0, sizeof *work);
+    work->n = n;
+    work->parts = parts;
+    work->rows = parts * n;
+    if (parts == 1)
+        room = vectors ? 1 + 6 * n + 2 * n * n : 1 + 2 * n + 64 * n;
+    else
+        room = vectors ? 2 * n + n * n : 1 + n + 64 * n;
+    if (parts == 2)
+        reals = vectors ? 1 + 5 * n + 2 * n * n : n;
+    if (n > 32000) { /* beyond the integers of this LAPACK */
+        layout->bytes = UINT64_MAX;
+        return;
+    }
+    work->room_count = (int)room;
+    work->real_count = (int)reals;
+    work->integer_count = (int)integers;
+    work->u = (double *)whorl_layout_carve(layout, work->rows, sizeof(double));
+    work->room = (double *)whorl_layout_carve(layout, room, parts * sizeof(double));
+    work->reals = (double *)whorl_layout_carve(layout, reals, sizeof(double));
+    work->integers = (int *)whorl_layout_carve(layout, integers, sizeof(int));
+}
+
+/* Everything between the scaling. */
+static whorl_status whorli_dense_solve(whorl_host *host, whorli_dense *work, int32_t vectors)
+{
+    const int n = (int)work->n;
+    int info = 0;
+    whorl_status status = whorl_poll(host);
+    if (status != WHORL_OK)
+        return status;
+    if (work->parts == 1)
+        dsyevd_(vectors ? "V" : "N", "L", &n, work->a, &n, work->diagonal, work->room, &work->room_count,
+                work->integers, &work->integer_count, &info);
+    else
+        zheevd_(vectors ? "V" : "N", "L", &n, work->a, &n, work->diagonal, work->room, &work->room_count, work->reals,
+                &work->real_count, work->integers, &work->integer_count, &info);
+    if (info != 0)
+        return whorl_fail(host, WHORL_NO_CONVERGENCE, "LAPACK found no spectrum: compile without WHORL_USE_LAPACK");
+    if (vectors) {
+        if (work->parts != 1)
+            whorli_dense_split(work->n, work->a, work->u, 1);
+        whorli_dense_phases(work);
+        if (work->parts != 1)
+            whorli_dense_split(work->n, work->a, work->u, 0);
+    }
+    return whorl_poll(host);
+}
+
+#else /* own code */
+
+/* ---- >>reduction ------------------------------------------------------------------------------------------------- */
+
+/*
+ * A = Q T Q^dagger by n - 1 reflections. One pass over the trailing columns applies the last reflection,
+ * A -= v w^dagger + w v^dagger, and multiplies the next, y = A u. It goes by strips of columns, each with a y of its
+ * own; the strips are added in order afterwards.
  */
 #define WHORLI_DENSE_STRIP 64   /* columns */
 #define WHORLI_DENSE_TILE 128   /* rows of some columns that stay in the first cache; a multiple of 8 */
 #define WHORLI_DENSE_PACK 16    /* reflections that are applied to a column of Q at one go */
 #define WHORLI_DENSE_COLUMNS 16 /* columns of Q in a block of work */
-
-typedef struct whorli_dense {
-    uint64_t n, parts, rows;
-    double *a;
-    double *diagonal;    /* the caller's values */
-    double *off;         /* n */
-    double *factor;      /* of the reflections: n complex numbers, tau */
-    double *u, *v, *w;   /* `rows` each: this reflection, the last one and its partner */
-    double *y;           /* one for each strip */
-    double *pack;        /* WHORLI_DENSE_PACK reflections */
-    double *turns, *buffers;
-    uint64_t step;       /* which column is reduced now */
-    uint64_t pack_first, pack_count;
-} whorli_dense;
 
 /* Measures or carves everything that a call takes. */
 static void whorli_dense_plan(whorl_layout *layout, whorli_dense *work, uint64_t n, uint64_t parts, int32_t vectors)
@@ -624,18 +770,6 @@ static whorl_complex whorli_dense_dot(const whorli_dense *work, uint64_t first, 
     return whorl_complex_of(whorli_dense_lane_sum(re), whorli_dense_lane_sum(im));
 }
 
-/* Element r of a vector or column. */
-static whorl_complex whorli_dense_get(const whorli_dense *work, const double *x, uint64_t r)
-{
-    return whorl_complex_of(x[r], work->parts == 1 ? 0.0 : x[work->n + r]);
-}
-static void whorli_dense_put(const whorli_dense *work, double *x, uint64_t r, whorl_complex value)
-{
-    x[r] = value.re;
-    if (work->parts != 1)
-        x[work->n + r] = value.im;
-}
-
 /* y += factor x over rows first .. n - 1. */
 static void whorli_dense_add(const whorli_dense *work, uint64_t first, whorl_complex factor,
                              const double *WHORLI_RESTRICT x, double *WHORLI_RESTRICT y)
@@ -661,16 +795,17 @@ typedef struct whorli_dense_heads {
 } whorli_dense_heads;
 
 /* One element: a - v_r conj(w_c) - w_r conj(v_c). */
-static whorl_complex whorli_dense_updated(whorl_complex a, whorl_complex vr, whorl_complex wr, const whorli_dense_heads *c)
+static whorl_complex whorli_dense_updated(whorl_complex a, whorl_complex vr, whorl_complex wr,
+                                          const whorli_dense_heads *c)
 {
     a.re -= (vr.re * c->w.re + vr.im * c->w.im) + (wr.re * c->v.re + wr.im * c->v.im);
     a.im -= (vr.im * c->w.re - vr.re * c->w.im) + (wr.im * c->v.re - wr.re * c->v.im);
     return a;
 }
 
-/* The upper triangle of a group of columns, down to row `end`, element by element: update, and both parts of y = A u. */
-static void whorli_dense_corner(const whorli_dense *work, uint64_t column, uint64_t end, const whorli_dense_heads *heads,
-                                double *y)
+/* The triangle on top of columns column .. end - 1, element by element: update, and both parts of y = A u. */
+static void whorli_dense_corner(const whorli_dense *work, uint64_t column, uint64_t end,
+                                const whorli_dense_heads *heads, double *y)
 {
     uint64_t c, r;
     for (c = column; c < end; c++)
@@ -730,8 +865,8 @@ static void whorli_dense_tile1(uint64_t count, double *WHORLI_RESTRICT a, const 
 }
 
 /* A tile of one complex column; imaginary parts are n further on. */
-static void whorli_dense_tile_complex(uint64_t count, uint64_t n, double *a, const double *v, const double *w, double *y,
-                                      const whorli_dense_heads *c)
+static void whorli_dense_tile_complex(uint64_t count, uint64_t n, double *a, const double *v, const double *w,
+                                      double *y, const whorli_dense_heads *c)
 {
     double *WHORLI_RESTRICT ar = a;
     double *WHORLI_RESTRICT ai = a + n;
@@ -833,8 +968,8 @@ static void whorli_dense_column(const whorli_dense *work)
 }
 
 /*
- * The reflection I - tau u u^dagger, u_(j+1) = 1, whose adjoint takes column j below the diagonal to (off_j, 0, ...), off_j real.
- * Entries are near 1 at most, so what has a square below 2^-900 may be dropped; above that nothing underflows.
+ * The reflection I - tau u u^dagger, u_(j+1) = 1, whose adjoint takes column j below the diagonal to (off_j, 0, ...),
+ * off_j real. The largest entry is near 1, so a rest of a square below 2^-900 may be dropped; above nothing underflows.
  */
 static void whorli_dense_reflection(const whorli_dense *work)
 {
@@ -852,15 +987,20 @@ static void whorli_dense_reflection(const whorli_dense *work)
         beta = sqrt(rest + (head.re * head.re + head.im * head.im));
         beta = head.re > 0.0 ? -beta : beta;
         tau = whorl_complex_of((beta - head.re) / beta, -head.im / beta);
-        scale = whorl_complex_of(head.re - beta, -head.im);
+        scale = whorl_complex_of(head.re - beta, -head.im); /* of its inverse, the conjugate */
         size = scale.re * scale.re + scale.im * scale.im;
-        scale = work->parts == 1 ? whorl_complex_of(1.0 / scale.re, 0.0) : whorl_complex_of(scale.re / size, scale.im / size);
+        if (work->parts == 1)
+            scale = whorl_complex_of(1.0 / scale.re, 0.0);
+        else
+            scale = whorl_complex_of(scale.re / size, scale.im / size);
         whorli_dense_add(work, j + 1, scale, a, work->u);
         work->off[j] = beta;
     }
     whorli_dense_put(work, work->u, j + 1, one);
-    for (part = 0; part < work->parts; part++)
-        memcpy(a + part * work->n + j + 1, work->u + part * work->n + j + 1, (size_t)(work->n - j - 1) * sizeof(double));
+    for (part = 0; part < work->parts; part++) {
+        uint64_t from = part * work->n + j + 1;
+        memcpy(a + from, work->u + from, (size_t)(work->n - j - 1) * sizeof(double));
+    }
     work->factor[2 * j] = tau.re;
     work->factor[2 * j + 1] = tau.im;
 }
@@ -901,7 +1041,7 @@ static whorl_status whorli_dense_reduce(whorl_host *host, whorli_dense *work)
     return WHORL_OK;
 }
 
-/* Block b of forming Q: some columns behind the pack's first, each through all reflections of the pack, last one first. */
+/* Block b of forming Q: some columns, each through all reflections of the pack, the last one first. */
 static void whorli_dense_unfold(void *argument, uint64_t block, int32_t worker)
 {
     const whorli_dense *work = (const whorli_dense *)argument;
@@ -920,8 +1060,8 @@ static void whorli_dense_unfold(void *argument, uint64_t block, int32_t worker)
 }
 
 /*
- * a becomes Q = H_0 H_1 ... H_(n-2), from the last reflection to the first: behind H_j only rows and columns from j + 1 on
- * are more than the unit matrix, while the reflections before it stand in columns before it.
+ * a becomes Q = H_0 H_1 ... H_(n-2), from the last reflection to the first: after H_j only rows and columns from j + 1
+ * on are more than the unit matrix, while the reflections still to come stand in columns before them.
  */
 static whorl_status whorli_dense_form(whorl_host *host, whorli_dense *work)
 {
@@ -951,84 +1091,6 @@ static whorl_status whorli_dense_form(whorl_host *host, whorli_dense *work)
             return status;
         done = first;
     }
-}
-
-/* ---- >>spectra ------------------------------------------------------------------------------------------------------- */
-
-/* Columns from interleaved to parts one behind the other, and back (`apart` 0); `room` holds one column. */
-static void whorli_dense_split(uint64_t n, double *a, double *room, int32_t apart)
-{
-    uint64_t c, r;
-    for (c = 0; c < n; c++) {
-        double *column = a + 2 * n * c;
-        memcpy(room, column, (size_t)(2 * n) * sizeof(double));
-        for (r = 0; r < n; r++)
-            if (apart) {
-                column[r] = room[2 * r];
-                column[n + r] = room[2 * r + 1];
-            } else {
-                column[2 * r] = room[r];
-                column[2 * r + 1] = room[n + r];
-            }
-    }
-}
-
-/* Makes the first component of at least half the largest modulus real and positive in every column. */
-static void whorli_dense_phases(const whorli_dense *work)
-{
-    uint64_t c, r, part;
-    for (c = 0; c < work->n; c++) {
-        double *q = work->a + c * work->rows, most = 0.0, size = 0.0;
-        whorl_complex x = {1.0, 0.0};
-        for (r = 0; r < work->n; r++) {
-            x = whorli_dense_get(work, q, r);
-            size = x.re * x.re + x.im * x.im;
-            most = size > most ? size : most;
-        }
-        for (r = 0; r < work->n; r++) {
-            x = whorli_dense_get(work, q, r);
-            size = x.re * x.re + x.im * x.im;
-            if (size >= 0.25 * most)
-                break;
-        }
-        if (work->parts == 1 || x.im == 0.0) {
-            for (part = 0; x.re < 0.0 && part < work->rows; part++)
-                q[part] = -q[part];
-            continue;
-        }
-        size = sqrt(size);
-        x = whorl_complex_of(x.re / size, -x.im / size);
-        for (part = 0; part < work->n; part++)
-            whorli_dense_put(work, q, part, whorl_complex_multiply(x, whorli_dense_get(work, q, part)));
-        whorli_dense_put(work, q, r, whorl_complex_of(size, 0.0));
-    }
-}
-
-/* The largest modulus of the lower triangle in *most; the index of an entry that is not finite, or WHORL_NONE. */
-static uint64_t whorli_dense_inspect(uint64_t n, uint64_t parts, const double *a, double *most)
-{
-    uint64_t c, wrong;
-    *most = 0.0;
-    for (c = 0; c < n; c++) {
-        const double *column = a + parts * (n * c + c);
-        wrong = whorl_is_finite(column[0]) ? whorli_dense_wrong(column + parts, parts * (n - c - 1)) : 0;
-        if (wrong != WHORL_NONE)
-            return n * c + c + (whorl_is_finite(column[0]) ? 1 + wrong / parts : 0);
-        *most = whorli_dense_largest(column, 1, *most);
-        *most = whorli_dense_largest(column + parts, parts * (n - c - 1), *most);
-    }
-    return WHORL_NONE;
-}
-
-/* The scratch of one call, in bytes of its block. */
-static uint64_t whorli_dense_bytes(uint64_t n, uint64_t parts, int32_t vectors)
-{
-    whorl_layout layout = {NULL, 0};
-    whorli_dense work;
-    if (whorl_size_multiply(whorl_size_multiply(n, n), parts * sizeof(double)) >= (UINT64_C(1) << 62))
-        return WHORL_NONE;
-    whorli_dense_plan(&layout, &work, n, parts, vectors);
-    return layout.bytes;
 }
 
 /* T's eigenvalues, and a times its eigenvectors. */
@@ -1065,6 +1127,37 @@ static whorl_status whorli_dense_solve(whorl_host *host, whorli_dense *work, int
     return WHORL_OK;
 }
 
+#endif /* own code */
+
+/* ---- >>spectra --------------------------------------------------------------------------------------------------- */
+
+/* The largest modulus of the lower triangle in *most; the index of an entry that is not finite, or WHORL_NONE. */
+static uint64_t whorli_dense_inspect(uint64_t n, uint64_t parts, const double *a, double *most)
+{
+    uint64_t c, wrong;
+    *most = 0.0;
+    for (c = 0; c < n; c++) {
+        const double *column = a + parts * (n * c + c);
+        wrong = whorl_is_finite(column[0]) ? whorli_dense_wrong(column + parts, parts * (n - c - 1)) : 0;
+        if (wrong != WHORL_NONE)
+            return n * c + c + (whorl_is_finite(column[0]) ? 1 + wrong / parts : 0);
+        *most = whorli_dense_largest(column, 1, *most);
+        *most = whorli_dense_largest(column + parts, parts * (n - c - 1), *most);
+    }
+    return WHORL_NONE;
+}
+
+/* The scratch of one call, in bytes of its block. */
+static uint64_t whorli_dense_bytes(uint64_t n, uint64_t parts, int32_t vectors)
+{
+    whorl_layout layout = {NULL, 0};
+    whorli_dense work;
+    if (whorl_size_multiply(whorl_size_multiply(n, n), parts * sizeof(double)) >= (UINT64_C(1) << 62))
+        return WHORL_NONE;
+    whorli_dense_plan(&layout, &work, n, parts, vectors);
+    return layout.bytes;
+}
+
 /* Real for parts 1, Hermitian for parts 2. */
 static whorl_status whorli_dense_spectrum(whorl_host *host, uint64_t n, uint64_t parts, double *a, double *values,
                                           int32_t vectors)
@@ -1080,10 +1173,10 @@ static whorl_status whorli_dense_spectrum(whorl_host *host, uint64_t n, uint64_t
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "the matrix or the array for its eigenvalues is NULL: give both");
     layout.bytes = whorli_dense_bytes(n, parts, vectors);
     if (layout.bytes == WHORL_NONE)
-        return whorl_fail(host, WHORL_TOO_LARGE, "the matrix exceeds the address space: n is wrong");
+        return whorl_fail(host, WHORL_TOO_LARGE, "n is too large: the matrix exceeds the address space or the integers of LAPACK");
     wrong = whorli_dense_inspect(n, parts, a, &most);
     if (wrong != WHORL_NONE)
-        return whorli_dense_not_finite(host, wrong, "the matrix has an entry that is NaN or infinite: see its index");
+        return whorli_dense_not_finite(host, wrong, "an entry of the matrix is NaN or infinite: see its index r + n c");
     if (n == 0)
         return WHORL_OK;
     status = whorl_layout_take(host, &layout, &block);
