@@ -1008,6 +1008,683 @@ whorl_complex whorl_tree_total(const whorl_tree *tree)
     return total;
 }
 
+/* ---- >>decimal ------------------------------------------------------------------------------------------------------- */
+
+/*
+ * A double is m 2^e with integers m < 2^53 and e. Written out exactly it is an integer in base 10^9 times a power of ten:
+ * m 2^e for e >= 0, and m 5^-e times 10^e below. 767 digits do for every double.
+ */
+#define WHORLI_DECIMAL_LIMBS 90
+typedef struct whorli_decimal {
+    char digit[WHORLI_DECIMAL_LIMBS * 9 + 1]; /* '0'..'9', first one not '0' (but for zero: count 0) */
+    int32_t count;
+    int32_t point; /* value = 0.d1 d2 d3 ... times 10^point */
+} whorli_decimal;
+
+static uint64_t whorli_real_bits(double value)
+{
+    uint64_t bits;
+    memcpy(&bits, &value, 8);
+    return bits;
+}
+
+static double whorli_real_of_bits(uint64_t bits)
+{
+    double value;
+    memcpy(&value, &bits, 8);
+    return value;
+}
+
+/* limbs[0 .. count) *= factor < 2^31, base 10^9, least significant first; returns the new count. */
+static int32_t whorli_limbs_multiply(uint32_t *limbs, int32_t count, uint32_t factor)
+{
+    uint64_t carry = 0;
+    int32_t i;
+    for (i = 0; i < count; i++) {
+        carry += (uint64_t)limbs[i] * factor;
+        limbs[i] = (uint32_t)(carry % 1000000000u);
+        carry /= 1000000000u;
+    }
+    for (; carry != 0; carry /= 1000000000u)
+        limbs[count++] = (uint32_t)(carry % 1000000000u);
+    return count;
+}
+
+/* All digits of a finite value, its sign left out. */
+static void whorli_decimal_of(double value, whorli_decimal *decimal)
+{
+    uint32_t limbs[WHORLI_DECIMAL_LIMBS];
+    uint64_t bits = whorli_real_bits(value), m = bits & ((UINT64_C(1) << 52) - 1);
+    int32_t e = (int32_t)((bits >> 52) & 0x7ff), count = 0, left, i, at = 0;
+    if (e == 0)
+        e = 1;
+    else
+        m |= UINT64_C(1) << 52;
+    e -= 1075;
+    decimal->count = 0;
+    decimal->point = 0;
+    if (m == 0)
+        return;
+    while ((m & 1) == 0) { /* fewer digits to make */
+        m >>= 1;
+        e++;
+    }
+    for (; m != 0; m /= 1000000000u)
+        limbs[count++] = (uint32_t)(m % 1000000000u);
+    for (left = e; left > 0; left -= 30)
+        count = whorli_limbs_multiply(limbs, count, UINT32_C(1) << (left < 30 ? left : 30));
+    for (left = -e; left > 0; left -= 12) {
+        uint32_t five = 1;
+        for (i = 0; i < 12 && i < left; i++)
+            five *= 5;
+        count = whorli_limbs_multiply(limbs, count, five);
+    }
+    for (i = count; i-- > 0;) {
+        uint32_t limb = limbs[i];
+        int32_t k;
+        for (k = 8; k >= 0; k--) {
+            decimal->digit[at + k] = (char)('0' + (int)(limb % 10));
+            limb /= 10;
+        }
+        at += 9;
+    }
+    for (i = 0; decimal->digit[i] == '0'; i++)
+        ;
+    memmove(decimal->digit, decimal->digit + i, (size_t)(at - i));
+    decimal->count = at - i;
+    decimal->point = decimal->count + (e < 0 ? e : 0);
+}
+
+/* The decimal cut to `keep` digits (0 or more), rounded to nearest, ties to even; trailing zeros are not kept. */
+static void whorli_decimal_round(whorli_decimal *decimal, int32_t keep)
+{
+    int32_t up = 0, i;
+    if (keep < decimal->count) {
+        up = decimal->digit[keep] > '5';
+        if (decimal->digit[keep] == '5') {
+            for (i = keep + 1; i < decimal->count && decimal->digit[i] == '0'; i++)
+                ;
+            up = i < decimal->count || (keep > 0 && ((decimal->digit[keep - 1] - '0') & 1) != 0);
+        }
+        decimal->count = keep;
+    }
+    if (up) {
+        for (i = keep; i > 0 && decimal->digit[i - 1] == '9'; i--)
+            ;
+        if (i <= 0) {
+            decimal->digit[0] = '1';
+            decimal->count = 1;
+            decimal->point++;
+        } else {
+            decimal->digit[i - 1]++;
+            decimal->count = i;
+        }
+    }
+    while (decimal->count > 0 && decimal->digit[decimal->count - 1] == '0')
+        decimal->count--;
+}
+
+/* Scientific text d.ddde-dd with `digits` digits, zeros behind the ones there are. */
+static void whorli_text_scientific(whorl_text *text, const whorli_decimal *decimal, int32_t digits)
+{
+    int32_t i;
+    for (i = 0; i < digits; i++) {
+        if (i == 1)
+            whorl_text_add_bytes(text, ".", 1);
+        whorl_text_add_bytes(text, i < decimal->count ? decimal->digit + i : "0", 1);
+    }
+    whorl_text_add_bytes(text, "e", 1);
+    whorl_text_add_signed(text, decimal->count == 0 ? 0 : decimal->point - 1);
+}
+
+/* Plain text with `decimals` digits behind the point. */
+static void whorli_text_plain(whorl_text *text, const whorli_decimal *decimal, int32_t decimals)
+{
+    int32_t i;
+    if (decimal->point <= 0)
+        whorl_text_add_bytes(text, "0", 1);
+    for (i = 0; i < decimal->point; i++)
+        whorl_text_add_bytes(text, i < decimal->count ? decimal->digit + i : "0", 1);
+    if (decimals > 0)
+        whorl_text_add_bytes(text, ".", 1);
+    for (i = decimal->point; i < decimal->point + decimals; i++)
+        whorl_text_add_bytes(text, i >= 0 && i < decimal->count ? decimal->digit + i : "0", 1);
+}
+
+/* Sign, or the whole text of what is not finite: then 1. */
+static int32_t whorli_text_special(whorl_text *text, double value)
+{
+    uint64_t bits = whorli_real_bits(value);
+    if (!whorl_is_finite(value) && (bits & ((UINT64_C(1) << 52) - 1)) != 0) {
+        whorl_text_add(text, "nan");
+        return 1;
+    }
+    if (bits >> 63 != 0)
+        whorl_text_add(text, "-");
+    if (!whorl_is_finite(value)) {
+        whorl_text_add(text, "inf");
+        return 1;
+    }
+    return 0;
+}
+
+/* Whether 0.d1 d2 ... 10^point reads as the finite value of these bits (without sign). */
+static int32_t whorli_decimal_reads(const whorli_decimal *decimal, uint64_t bits)
+{
+    char text[48];
+    double back = 0.0;
+    whorl_text writer = whorl_text_over(text, sizeof text);
+    whorli_text_scientific(&writer, decimal, decimal->count);
+    return whorl_real_read(text, writer.used, &back) == writer.used && whorli_real_bits(back) == bits;
+}
+
+/* The neighbour of a rounded decimal on the other side of the exact value: one unit in digit `keep` up or down. */
+static void whorli_decimal_other(const whorli_decimal *exact, whorli_decimal *rounded, int32_t keep)
+{
+    whorli_decimal cut = *exact;
+    int32_t i;
+    if (keep >= exact->count)
+        return;
+    cut.count = keep; /* cut towards zero */
+    while (cut.count > 0 && cut.digit[cut.count - 1] == '0')
+        cut.count--;
+    if (rounded->count != cut.count || rounded->point != cut.point ||
+        memcmp(rounded->digit, cut.digit, (size_t)cut.count) != 0) {
+        *rounded = cut;
+        return;
+    }
+    cut.count = keep;
+    memcpy(cut.digit, exact->digit, (size_t)keep);
+    for (i = keep; i > 0 && cut.digit[i - 1] == '9'; i--)
+        ;
+    if (i == 0) {
+        cut.digit[0] = '1';
+        cut.count = 1;
+        cut.point++;
+    } else {
+        cut.digit[i - 1]++;
+        cut.count = i;
+    }
+    *rounded = cut;
+}
+
+/*
+ * The fewest digits that read back as the value. A decimal of up to 15 digits survives the way through a normal double, so
+ * if any does, rounding to 15 digits finds it; beyond, and for denormals, each length is tried, both neighbours.
+ */
+static void whorli_decimal_shortest(double value, whorli_decimal *decimal)
+{
+    uint64_t bits = whorli_real_bits(value) & (UINT64_MAX >> 1);
+    whorli_decimal exact;
+    int32_t digits;
+    whorli_decimal_of(value, &exact);
+    *decimal = exact;
+    if (exact.count == 0)
+        return;
+    for (digits = bits >> 52 == 0 ? 1 : 15; digits < 17; digits++) {
+        *decimal = exact;
+        whorli_decimal_round(decimal, digits);
+        if (whorli_decimal_reads(decimal, bits))
+            return;
+        if (bits >> 52 != 0 && digits < 16)
+            continue;
+        whorli_decimal_other(&exact, decimal, digits);
+        if (decimal->count > 0 && whorli_decimal_reads(decimal, bits))
+            return;
+    }
+    *decimal = exact;
+    whorli_decimal_round(decimal, 17);
+}
+
+int32_t whorl_real_write(double value, char *text)
+{
+    whorl_text writer = whorl_text_over(text, WHORL_REAL_TEXT);
+    whorli_decimal decimal;
+    if (whorli_text_special(&writer, value))
+        return (int32_t)writer.used;
+    whorli_decimal_shortest(value, &decimal);
+    if (decimal.point < -4 || decimal.point > 17)
+        whorli_text_scientific(&writer, &decimal, decimal.count);
+    else
+        whorli_text_plain(&writer, &decimal, decimal.count > decimal.point ? decimal.count - decimal.point : 0);
+    return (int32_t)writer.used;
+}
+
+int32_t whorl_real_write_digits(double value, int32_t digits, char *text, int32_t room)
+{
+    whorl_text writer = whorl_text_over(text, room > 0 ? (uint64_t)room : 0);
+    whorli_decimal decimal;
+    digits = digits < 1 ? 1 : digits > 40 ? 40 : digits;
+    if (whorli_text_special(&writer, value))
+        return (int32_t)writer.used;
+    whorli_decimal_of(value, &decimal);
+    whorli_decimal_round(&decimal, digits);
+    whorli_text_scientific(&writer, &decimal, digits);
+    return (int32_t)writer.used;
+}
+
+int32_t whorl_real_write_fixed(double value, int32_t decimals, char *text, int32_t room)
+{
+    whorl_text writer = whorl_text_over(text, room > 0 ? (uint64_t)room : 0);
+    whorli_decimal decimal;
+    decimals = decimals < 0 ? 0 : decimals > 40 ? 40 : decimals;
+    if (whorli_text_special(&writer, value))
+        return (int32_t)writer.used;
+    whorli_decimal_of(value, &decimal);
+    if (decimal.point + decimals < 0)
+        decimal.count = 0;
+    else
+        whorli_decimal_round(&decimal, decimal.point + decimals);
+    if (decimal.count == 0)
+        decimal.point = 0;
+    whorli_text_plain(&writer, &decimal, decimals);
+    return (int32_t)writer.used;
+}
+
+/*
+ * Reading. First in 64-bit fractions with a counted error: that decides nearly always. Where a halfway point lies within
+ * the error, the decimal is compared with it exactly, in integers of base 2^32.
+ */
+#define WHORLI_READ_DIGITS 780 /* more than the 767 that a halfway point can have; what follows is one sticky digit */
+#define WHORLI_BIG_LIMBS 180
+typedef struct whorli_big {
+    uint32_t limb[WHORLI_BIG_LIMBS];
+    int32_t count;
+} whorli_big;
+
+static void whorli_big_multiply_add(whorli_big *big, uint32_t factor, uint32_t addend)
+{
+    uint64_t carry = addend;
+    int32_t i;
+    for (i = 0; i < big->count; i++) {
+        carry += (uint64_t)big->limb[i] * factor;
+        big->limb[i] = (uint32_t)carry;
+        carry >>= 32;
+    }
+    if (carry != 0)
+        big->limb[big->count++] = (uint32_t)carry;
+}
+
+static void whorli_big_power(whorli_big *big, uint32_t base, int32_t exponent, int32_t most)
+{
+    for (; exponent > 0; exponent -= most) {
+        uint32_t factor = 1;
+        int32_t i;
+        for (i = 0; i < most && i < exponent; i++)
+            factor *= base;
+        whorli_big_multiply_add(big, factor, 0);
+    }
+}
+
+static void whorli_big_shift(whorli_big *big, int32_t bits)
+{
+    int32_t limbs = bits / 32, i;
+    whorli_big_multiply_add(big, UINT32_C(1) << (bits % 32), 0);
+    if (limbs == 0 || big->count == 0)
+        return;
+    for (i = big->count; i-- > 0;)
+        big->limb[i + limbs] = big->limb[i];
+    for (i = 0; i < limbs; i++)
+        big->limb[i] = 0;
+    big->count += limbs;
+}
+
+static int32_t whorli_big_compare(const whorli_big *a, const whorli_big *b)
+{
+    int32_t i;
+    if (a->count != b->count)
+        return a->count < b->count ? -1 : 1;
+    for (i = a->count; i-- > 0;)
+        if (a->limb[i] != b->limb[i])
+            return a->limb[i] < b->limb[i] ? -1 : 1;
+    return 0;
+}
+
+/* Sign of digits * 10^exponent - half * 2^power, exactly. */
+static int32_t whorli_compare_halfway(const char *digits, int32_t count, int32_t exponent, uint64_t half, int32_t power)
+{
+    whorli_big decimal, binary;
+    int32_t i;
+    decimal.count = binary.count = 0;
+    for (i = 0; i < count; i++)
+        whorli_big_multiply_add(&decimal, 10, (uint32_t)(digits[i] - '0'));
+    binary.limb[0] = (uint32_t)half;
+    binary.limb[1] = (uint32_t)(half >> 32);
+    binary.count = half >> 32 != 0 ? 2 : 1;
+    whorli_big_power(exponent >= 0 ? &decimal : &binary, 5, exponent >= 0 ? exponent : -exponent, 13);
+    power -= exponent; /* 10^exponent = 5^exponent 2^exponent */
+    whorli_big_shift(power >= 0 ? &binary : &decimal, power >= 0 ? power : -power);
+    return whorli_big_compare(&decimal, &binary);
+}
+
+/* m 2^e with m in [2^63, 2^64); the true value is within `error` units of m. */
+typedef struct whorli_fraction {
+    uint64_t m;
+    int32_t e;
+    uint64_t error;
+} whorli_fraction;
+
+static whorli_fraction whorli_fraction_of(uint64_t m)
+{
+    whorli_fraction f;
+    int32_t shift = 63 - whorl_bits_highest(m);
+    f.m = m << shift;
+    f.e = -shift;
+    f.error = 0;
+    return f;
+}
+
+/* The product rounded down; each factor's error counts once (m <= 2^64), and cutting 1, doubled by the last shift. */
+static whorli_fraction whorli_fraction_multiply(whorli_fraction a, whorli_fraction b)
+{
+    uint64_t a1 = a.m >> 32, a0 = a.m & UINT32_MAX, b1 = b.m >> 32, b0 = b.m & UINT32_MAX;
+    uint64_t low = a0 * b0, mid = a1 * b0 + (low >> 32), cross = a0 * b1 + (mid & UINT32_MAX);
+    whorli_fraction product;
+    product.m = a1 * b1 + (mid >> 32) + (cross >> 32);
+    product.e = a.e + b.e + 64;
+    product.error = a.error + b.error + 1;
+    if (product.m >> 63 == 0) {
+        product.m = product.m << 1 | ((cross >> 31) & 1);
+        product.e--;
+        product.error = 2 * product.error;
+    }
+    return product;
+}
+
+/* 1 / f: 2^127 / m by long division, bit by bit. */
+static whorli_fraction whorli_fraction_inverse(whorli_fraction f)
+{
+    whorli_fraction inverse;
+    uint64_t rest = UINT64_C(1) << 63, quotient = 0;
+    int32_t i;
+    if (f.m == rest) {
+        inverse = f;
+        inverse.e = -126 - f.e;
+        inverse.error = 2 * f.error;
+        return inverse;
+    }
+    for (i = 0; i < 64; i++) { /* rest < m before each step */
+        uint64_t top = rest >> 63;
+        rest <<= 1;
+        quotient <<= 1;
+        if (top != 0 || rest >= f.m) {
+            rest -= f.m;
+            quotient |= 1;
+        }
+    }
+    inverse.m = quotient;
+    inverse.e = -127 - f.e;
+    inverse.error = 4 * f.error + 1;
+    return inverse;
+}
+
+/* 10^exponent for 0 <= exponent < 512: exact up to 10^27. */
+static whorli_fraction whorli_fraction_power(int32_t exponent)
+{
+    whorli_fraction power = whorli_fraction_of(1), square;
+    int32_t i, rest = exponent % 27;
+    uint64_t five = 1;
+    for (i = 0; i < rest; i++)
+        five *= 5;
+    power = whorli_fraction_of(five);
+    power.e += rest;
+    five = 1;
+    for (i = 0; i < 27; i++)
+        five *= 5;
+    square = whorli_fraction_of(five);
+    square.e += 27;
+    for (i = exponent / 27; i != 0; i >>= 1) {
+        if ((i & 1) != 0)
+            power = whorli_fraction_multiply(power, square);
+        square = whorli_fraction_multiply(square, square);
+    }
+    return power;
+}
+
+/* digits[0 .. count) 10^exponent, first digit not zero, as the bits of the nearest double. */
+static uint64_t whorli_real_nearest(const char *digits, int32_t count, int32_t exponent)
+{
+    uint64_t lead = 0, below, half, unit, low, mantissa;
+    whorli_fraction f, power;
+    int32_t i, used = count < 19 ? count : 19, drop, up;
+    if (count + exponent > 310)
+        return UINT64_C(0x7ff) << 52;
+    if (count + exponent < -326)
+        return 0;
+    for (i = 0; i < used; i++)
+        lead = 10 * lead + (uint64_t)(digits[i] - '0');
+    f = whorli_fraction_of(lead);
+    if (used < count)
+        f.error = UINT64_C(1) << (f.e < 0 ? -f.e : 0); /* less than one unit of lead was cut off */
+    i = exponent + count - used;
+    power = whorli_fraction_power(i < 0 ? -i : i);
+    if (i < 0)
+        power = whorli_fraction_inverse(power);
+    if (i != 0)
+        f = whorli_fraction_multiply(f, power);
+    /* the value is f.m 2^f.e; the double keeps all but `drop` of the 64 bits */
+    drop = 11;
+    if (f.e + drop < -1074)
+        drop = -1074 - f.e;
+    if (drop > 64)
+        return 0; /* below half of the smallest, also with the error */
+    unit = drop >= 64 ? 0 : UINT64_C(1) << drop;
+    low = drop >= 64 ? f.m : f.m & (unit - 1);
+    mantissa = drop >= 64 ? 0 : f.m >> drop;
+    half = UINT64_C(1) << (drop - 1);
+    below = low > half ? low - half : half - low;
+    if (f.error != 0 ? below > f.error : below != 0) {
+        up = low > half;
+    } else if (f.error == 0) {
+        up = (int32_t)(mantissa & 1);
+    } else {
+        /* halfway is (2 mantissa + 1) 2^(e + drop - 1) */
+        int32_t sign = whorli_compare_halfway(digits, count, exponent, 2 * mantissa + 1, f.e + drop - 1);
+        up = sign > 0 || (sign == 0 && (mantissa & 1) != 0);
+    }
+    mantissa += (uint64_t)up;
+    if (mantissa == 0)
+        return 0;
+    i = f.e + drop; /* mantissa 2^i, mantissa <= 2^53 */
+    if (mantissa >> 53 != 0) {
+        mantissa >>= 1;
+        i++;
+    }
+    if (mantissa >> 52 == 0)
+        return mantissa; /* denormal: i = -1074 */
+    if (i + 1075 >= 0x7ff)
+        return UINT64_C(0x7ff) << 52;
+    return (uint64_t)(i + 1075) << 52 | (mantissa & ((UINT64_C(1) << 52) - 1));
+}
+
+uint64_t whorl_real_read(const char *text, uint64_t length, double *value)
+{
+    char digits[WHORLI_READ_DIGITS + 1];
+    int32_t count = 0, seen = 0, sticky = 0;
+    int64_t exponent = 0;
+    uint64_t at = 0, negative = 0, bits = 0;
+    int32_t point = 0;
+    if (at < length && (text[at] == '+' || text[at] == '-'))
+        negative = text[at++] == '-';
+    for (; at < length; at++) {
+        if (text[at] == '.' && !point) {
+            point = 1;
+            continue;
+        }
+        if (text[at] < '0' || text[at] > '9')
+            break;
+        seen = 1;
+        if (count == 0 && text[at] == '0') {
+            exponent -= point; /* leading zeros */
+        } else if (count < WHORLI_READ_DIGITS) {
+            digits[count++] = text[at];
+            exponent -= point;
+        } else {
+            sticky |= text[at] != '0';
+            exponent += !point;
+        }
+    }
+    if (!seen)
+        return 0;
+    if (at < length && (text[at] == 'e' || text[at] == 'E')) {
+        uint64_t ahead = at + 1;
+        int64_t written = 0, sign = 1;
+        if (ahead < length && (text[ahead] == '+' || text[ahead] == '-'))
+            sign = text[ahead++] == '-' ? -1 : 1;
+        if (ahead < length && text[ahead] >= '0' && text[ahead] <= '9') {
+            for (; ahead < length && text[ahead] >= '0' && text[ahead] <= '9'; ahead++)
+                if (written < (INT64_C(1) << 58))
+                    written = 10 * written + (text[ahead] - '0');
+            exponent += sign * written;
+            at = ahead;
+        }
+    }
+    if (count > 0) {
+        if (sticky)
+            digits[count++] = '1', exponent--;
+        else
+            for (; digits[count - 1] == '0'; count--)
+                exponent++;
+        if (exponent > 400)
+            bits = UINT64_C(0x7ff) << 52;
+        else if (exponent + count >= -400)
+            bits = whorli_real_nearest(digits, count, (int32_t)exponent);
+    }
+    *value = whorli_real_of_bits(bits | negative << 63);
+    return at;
+}
+
+/* ---- >>arithmetic ---------------------------------------------------------------------------------------------------- */
+
+int32_t whorl_arithmetic(void)
+{
+    /* values that a compiler cannot fold; each formula has one result under IEEE 754 and another one otherwise */
+    volatile double one = 1.0, tiny = 1.0 / 9007199254740992.0, epsilon = 2.0 * tiny, least = 2.2250738585072014e-308;
+    volatile double big = 1e300, ten = 10.0;
+    double a = one + 1024.0 * 1024.0 * 32.0 * epsilon, sum, back, quotient; /* 1 + 2^-27: its square does not fit 53 bits */
+    int32_t flags = 0, i;
+    double vector[8], total = 0.0;
+    sum = a * a - (one + 2.0 * (a - one));
+    if (sum != 0.0)
+        flags |= WHORL_ARITHMETIC_CONTRACTS;
+    back = (one + tiny) - one; /* tiny vanishes in the first sum */
+    if (back != 0.0)
+        flags |= WHORL_ARITHMETIC_REASSOCIATES;
+    for (i = 0; i < 8; i++)
+        vector[i] = i % 2 == 0 ? one : (i == 7 ? -4.0 * one : tiny * (double)i);
+    for (i = 0; i < 8; i++)
+        total += vector[i]; /* from left to right every tiny one is lost or kept in one way only */
+    {
+        volatile double left = 0.0;
+        for (i = 0; i < 8; i++)
+            left = left + vector[i];
+        if (left != total)
+            flags |= WHORL_ARITHMETIC_REASSOCIATES;
+    }
+    quotient = least / 4.0;
+    {
+        volatile double small = least, divided;
+        divided = small / 4.0;
+        if (divided == 0.0 || quotient * 4.0 != least)
+            flags |= WHORL_ARITHMETIC_FLUSHES;
+    }
+    back = big * ten * 1e10; /* 1e311 overflows where doubles are doubles */
+    if (whorl_is_finite(back * 1e-20))
+        flags |= WHORL_ARITHMETIC_EXTENDS;
+    return flags;
+}
+
+/* ---- >>dot ----------------------------------------------------------------------------------------------------------- */
+
+static double whorli_lanes_total(const double *lane)
+{
+    return ((lane[0] + lane[4]) + (lane[2] + lane[6])) + ((lane[1] + lane[5]) + (lane[3] + lane[7]));
+}
+
+/* Doubles of a leaf that are not there count as zeros: the last group of eight is filled up. */
+static void whorli_leaf_load(whorl_element element, const void *from, uint64_t count, double *to)
+{
+    uint64_t i, reals = whorl_element_is_complex(element) ? 2 * count : count;
+    if (whorl_element_is_float(element)) {
+        const float *at = (const float *)from;
+        for (i = 0; i < reals; i++)
+            to[i] = (double)at[i];
+    } else {
+        memcpy(to, from, (size_t)(8 * reals));
+    }
+}
+
+/* Products in order of the index, lane = index mod 8; `count` may end inside a group of eight. */
+static double whorli_leaf_real(const double *x, const double *y, uint64_t count)
+{
+    double lane[8] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0};
+    uint64_t i, j;
+    for (i = 0; i + 8 <= count; i += 8)
+        for (j = 0; j < 8; j++)
+            lane[j] += x[i + j] * y[i + j];
+    for (j = 0; i + j < count; j++)
+        lane[j] += x[i + j] * y[i + j];
+    return whorli_lanes_total(lane);
+}
+
+static whorl_complex whorli_leaf_complex(const double *x, const double *y, uint64_t count)
+{
+    double re[8] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0}, im[8] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0};
+    uint64_t i, j;
+    for (i = 0; i < count; i += 8)
+        for (j = 0; j < 8 && i + j < count; j++) {
+            const double *a = x + 2 * (i + j), *b = y + 2 * (i + j);
+            re[j] += a[0] * b[0] + a[1] * b[1];
+            im[j] += a[0] * b[1] - a[1] * b[0];
+        }
+    return whorl_complex_of(whorli_lanes_total(re), whorli_lanes_total(im));
+}
+
+whorl_complex whorl_leaf_dot(whorl_element element, const void *x, const void *y, uint64_t count)
+{
+    double a[2 * WHORL_LEAF], b[2 * WHORL_LEAF];
+    if (count > WHORL_LEAF)
+        count = WHORL_LEAF;
+    if (element == WHORL_REAL_DOUBLE)
+        return whorl_complex_of(whorli_leaf_real((const double *)x, (const double *)y, count), 0.0);
+    if (element == WHORL_COMPLEX_DOUBLE)
+        return whorli_leaf_complex((const double *)x, (const double *)y, count);
+    whorli_leaf_load(element, x, count, a);
+    whorli_leaf_load(element, y, count, b);
+    if (element == WHORL_REAL_FLOAT)
+        return whorl_complex_of(whorli_leaf_real(a, b, count), 0.0);
+    return whorli_leaf_complex(a, b, count);
+}
+
+whorl_complex whorl_dot(whorl_element element, const void *x, const void *y, uint64_t count)
+{
+    whorl_tree tree;
+    uint64_t i, bytes = whorl_element_bytes(element);
+    whorl_tree_clear(&tree);
+    for (i = 0; i < count; i += WHORL_LEAF) {
+        uint64_t left = count - i;
+        whorl_tree_add(&tree, whorl_leaf_dot(element, (const char *)x + i * bytes, (const char *)y + i * bytes,
+                                             left < WHORL_LEAF ? left : WHORL_LEAF));
+    }
+    return whorl_tree_total(&tree);
+}
+
+double whorl_sum_reals(const double *x, uint64_t count)
+{
+    whorl_tree tree;
+    uint64_t i, j, k;
+    whorl_tree_clear(&tree);
+    for (i = 0; i < count; i += WHORL_LEAF) {
+        double lane[8] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0};
+        uint64_t end = count - i < WHORL_LEAF ? count - i : WHORL_LEAF;
+        for (j = 0; j < end; j += 8)
+            for (k = 0; k < 8 && j + k < end; k++)
+                lane[k] += x[i + j + k];
+        whorl_tree_add(&tree, whorl_complex_of(whorli_lanes_total(lane), 0.0));
+    }
+    return whorl_tree_total(&tree).re;
+}
+
 WHORLI_ARITHMETIC_END
 WHORLI_C_END
 #endif /* implementation */
