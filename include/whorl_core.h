@@ -69,6 +69,15 @@
 #if defined(__clang__)
 #define WHORLI_ARITHMETIC_BEGIN _Pragma("float_control(precise, on, push)") _Pragma("clang fp contract(off)")
 #define WHORLI_ARITHMETIC_END _Pragma("float_control(pop)")
+#elif defined(__GNUC__) && (defined(__x86_64__) || defined(__i386__))
+/*
+ * GCC 12 turns a pair (a b - c d, a d + b c) into one fused fmaddsub whatever fp-contract says; so these instructions
+ * are hidden from it. The target must stand first: after the optimize pragma it is lost under -ffast-math.
+ */
+#define WHORLI_ARITHMETIC_BEGIN \
+    _Pragma("GCC push_options") _Pragma("GCC target(\"no-fma\", \"no-fma4\", \"no-avx512f\")") \
+    _Pragma("GCC optimize(\"O3\", \"no-fast-math\", \"fp-contract=off\")")
+#define WHORLI_ARITHMETIC_END _Pragma("GCC pop_options")
 #elif defined(__GNUC__)
 #define WHORLI_ARITHMETIC_BEGIN \
     _Pragma("GCC push_options") _Pragma("GCC optimize(\"O3\", \"no-fast-math\", \"fp-contract=off\")")
