@@ -1173,7 +1173,7 @@ static whorl_status whorli_dense_spectrum(whorl_host *host, uint64_t n, uint64_t
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "the matrix or the array for its eigenvalues is NULL: give both");
     layout.bytes = whorli_dense_bytes(n, parts, vectors);
     if (layout.bytes == WHORL_NONE)
-        return whorl_fail(host, WHORL_TOO_LARGE, "n is too large: the matrix exceeds the address space or the integers of LAPACK");
+        return whorl_fail(host, WHORL_TOO_LARGE, "n is too large: the matrix exceeds memory or the integers of LAPACK");
     wrong = whorli_dense_inspect(n, parts, a, &most);
     if (wrong != WHORL_NONE)
         return whorli_dense_not_finite(host, wrong, "an entry of the matrix is NaN or infinite: see its index r + n c");
