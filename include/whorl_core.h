@@ -44,6 +44,13 @@
 #define WHORLI_GNU 0
 #endif
 
+/* The builtin is an instruction on these; elsewhere it would be a call into the compiler's own library. */
+#if WHORLI_GNU && (defined(__POPCNT__) || defined(__aarch64__) || defined(_ARCH_PWR7))
+#define WHORLI_POPCOUNT 1
+#else
+#define WHORLI_POPCOUNT 0
+#endif
+
 #if defined(__GNUC__) || defined(__clang__)
 #define WHORLI_UNUSED __attribute__((unused))
 #else
@@ -317,7 +324,7 @@ WHORL_API int32_t whorl_workers(const whorl_host *host);
 /* Number of set bits. */
 static inline int32_t whorl_bits_count(uint64_t word)
 {
-#if WHORLI_GNU
+#if WHORLI_POPCOUNT
     return (int32_t)__builtin_popcountll((unsigned long long)word);
 #else
     word -= (word >> 1) & UINT64_C(0x5555555555555555);
@@ -329,8 +336,10 @@ static inline int32_t whorl_bits_count(uint64_t word)
 /* Number of set bits modulo 2. */
 static inline int32_t whorl_bits_parity(uint64_t word)
 {
-#if WHORLI_GNU
-    return (int32_t)__builtin_parityll((unsigned long long)word);
+#if WHORLI_POPCOUNT
+    return (int32_t)__builtin_popcountll((unsigned long long)word) & 1;
+#elif WHORLI_GNU && (defined(__x86_64__) || defined(__i386__))
+    return (int32_t)__builtin_parityll((unsigned long long)word); /* the parity flag */
 #else
     word ^= word >> 32;
     word ^= word >> 16;
