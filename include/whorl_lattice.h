@@ -286,8 +286,9 @@ static int32_t whorli_lattice_cell_index(const whorl_lattice *lattice, const int
 
 /* ---- >>descriptions ---------------------------------------------------------------------------------------------- */
 
-static const char *const whorli_lattice_names[8] WHORLI_UNUSED = {"chain",     "ladder", "square", "triangular",
-                                                                  "honeycomb", "kagome", "cubic",  "cell"};
+/* arrays, not pointers: these would need relocation, and with it a writable section */
+static const char whorli_lattice_names[8][12] WHORLI_UNUSED = {"chain",     "ladder", "square", "triangular",
+                                                               "honeycomb", "kagome", "cubic",  "cell"};
 
 const char *whorl_lattice_kind_name(whorl_lattice_kind kind)
 {
