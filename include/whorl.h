@@ -2,5 +2,6 @@
 #include "whorl_core.h"
 #include "whorl_pauli.h"
 #include "whorl_space.h"
+#include "whorl_map.h"
 #include "whorl_dense.h"
 #include "whorl_lattice.h"
