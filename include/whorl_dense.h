@@ -205,16 +205,36 @@ static void whorli_dense_rotate(uint64_t count, double *WHORLI_RESTRICT a, doubl
     }
 }
 
-/* The same for a panel's column of fixed length, the second column following the first. */
-static void whorli_dense_rotate_panel(double *a, double c, double s)
+/*
+ * Rotations in a panel that follow each other: the first on columns (x, x + step), the next on (x + step, x + 2 step),
+ * with c and s in pairs. Four at a time keep the column between them in registers.
+ */
+static void whorli_dense_chain1(double *x, int64_t step, const double *turn)
 {
-    double *WHORLI_RESTRICT x = a;
-    double *WHORLI_RESTRICT y = a + WHORLI_DENSE_ROWS;
+    whorli_dense_rotate(WHORLI_DENSE_ROWS, x, x + step, turn[0], turn[1]);
+}
+static void whorli_dense_chain4(double *x, int64_t step, const double *turn)
+{
+    double *WHORLI_RESTRICT x0 = x;
+    double *WHORLI_RESTRICT x1 = x + step;
+    double *WHORLI_RESTRICT x2 = x + 2 * step;
+    double *WHORLI_RESTRICT x3 = x + 3 * step;
+    double *WHORLI_RESTRICT x4 = x + 4 * step;
+    const double c0 = turn[0], s0 = turn[1], c1 = turn[2], s1 = turn[3];
+    const double c2 = turn[4], s2 = turn[5], c3 = turn[6], s3 = turn[7];
     uint64_t r;
     for (r = 0; r < WHORLI_DENSE_ROWS; r++) {
-        double p = x[r], q = y[r];
-        x[r] = c * p - s * q;
-        y[r] = s * p + c * q;
+        double p = x0[r], q = x1[r], carried = s0 * p + c0 * q;
+        x0[r] = c0 * p - s0 * q;
+        q = x2[r];
+        x1[r] = c1 * carried - s1 * q;
+        carried = s1 * carried + c1 * q;
+        q = x3[r];
+        x2[r] = c2 * carried - s2 * q;
+        carried = s2 * carried + c2 * q;
+        q = x4[r];
+        x3[r] = c3 * carried - s3 * q;
+        x4[r] = s3 * carried + c3 * q;
     }
 }
 
@@ -234,14 +254,30 @@ static void whorli_dense_wave(const whorli_dense_turns *turns, uint64_t first, u
         from = p == 0 || begin > from ? begin : from;
         to = p == 0 || end < to ? end : to;
     }
-    for (front = from; front >= to; front--)
-        for (p = 0; p < count; p++) {
+    for (front = from; front >= to; front--) {
+        double chain[2 * WHORLI_DENSE_WAVE];
+        uint64_t length = 0, k;
+        for (p = 0; p <= count; p++) {
             int64_t j = order * (front + (int64_t)p);
-            if (j >= (int64_t)turns->low[first + p] && j <= (int64_t)turns->high[first + p]) {
+            if (p < count && j >= (int64_t)turns->low[first + p] && j <= (int64_t)turns->high[first + p]) {
                 const double *turn = turns->turns + 2 * ((first + p) * turns->n + (uint64_t)j);
-                whorli_dense_rotate_panel(panel + ((uint64_t)j - base) * WHORLI_DENSE_ROWS, turn[0], turn[1]);
+                chain[2 * length] = turn[0];
+                chain[2 * length + 1] = order > 0 ? turn[1] : -turn[1]; /* seen from column j + 1 */
+                length++;
+                continue;
             }
+            if (length != 0) { /* it began at p - length */
+                int64_t column = order * (front + (int64_t)(p - length)) + (order > 0 ? 0 : 1) - (int64_t)base;
+                double *x = panel + column * WHORLI_DENSE_ROWS;
+                const int64_t step = order * WHORLI_DENSE_ROWS;
+                for (k = 0; k + 4 <= length; k += 4)
+                    whorli_dense_chain4(x + (int64_t)k * step, step, chain + 2 * k);
+                for (; k < length; k++)
+                    whorli_dense_chain1(x + (int64_t)k * step, step, chain + 2 * k);
+            }
+            length = 0;
         }
+    }
 }
 
 /* Block b of a flush: panels b, b + WHORLI_DENSE_PANELS, ... of rows, each through its own buffer. */
@@ -727,31 +763,16 @@ static void whorli_dense_lanes(uint64_t count, const double *WHORLI_RESTRICT x, 
         lanes[l] = sum[l];
 }
 
-/* The same for conj(x) y, x and y with their imaginary parts n further on. */
-static void whorli_dense_lanes_complex(uint64_t count, uint64_t n, const double *WHORLI_RESTRICT x,
-                                       const double *WHORLI_RESTRICT y, double *WHORLI_RESTRICT re,
-                                       double *WHORLI_RESTRICT im)
+/*
+ * The same for conj(x) y, x and y with their imaginary parts n further on: lanes 0 .. 7 for the real part, 8 .. 15
+ * minus 16 .. 23 for the imaginary one. Four passes, as compilers make good code of each.
+ */
+static void whorli_dense_lanes_complex(uint64_t count, uint64_t n, const double *x, const double *y, double *lanes)
 {
-    const double *xi = x + n, *yi = y + n;
-    double real[8], imaginary[8];
-    uint64_t r, l;
-    for (l = 0; l < 8; l++) {
-        real[l] = re[l];
-        imaginary[l] = im[l];
-    }
-    for (r = 0; r + 8 <= count; r += 8)
-        for (l = 0; l < 8; l++) {
-            real[l] += x[r + l] * y[r + l] + xi[r + l] * yi[r + l];
-            imaginary[l] += x[r + l] * yi[r + l] - xi[r + l] * y[r + l];
-        }
-    for (l = 0; r + l < count; l++) {
-        real[l] += x[r + l] * y[r + l] + xi[r + l] * yi[r + l];
-        imaginary[l] += x[r + l] * yi[r + l] - xi[r + l] * y[r + l];
-    }
-    for (l = 0; l < 8; l++) {
-        re[l] = real[l];
-        im[l] = imaginary[l];
-    }
+    whorli_dense_lanes(count, x, y, lanes);
+    whorli_dense_lanes(count, x + n, y + n, lanes);
+    whorli_dense_lanes(count, x, y + n, lanes + 8);
+    whorli_dense_lanes(count, x + n, y, lanes + 16);
 }
 
 static double whorli_dense_lane_sum(const double *lanes)
@@ -762,12 +783,14 @@ static double whorli_dense_lane_sum(const double *lanes)
 /* <x, y> over rows first .. n - 1. */
 static whorl_complex whorli_dense_dot(const whorli_dense *work, uint64_t first, const double *x, const double *y)
 {
-    double re[8] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0}, im[8] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0};
+    double lanes[24];
+    memset(lanes, 0, sizeof lanes);
     if (work->parts == 1)
-        whorli_dense_lanes(work->n - first, x + first, y + first, re);
+        whorli_dense_lanes(work->n - first, x + first, y + first, lanes);
     else
-        whorli_dense_lanes_complex(work->n - first, work->n, x + first, y + first, re, im);
-    return whorl_complex_of(whorli_dense_lane_sum(re), whorli_dense_lane_sum(im));
+        whorli_dense_lanes_complex(work->n - first, work->n, x + first, y + first, lanes);
+    return whorl_complex_of(whorli_dense_lane_sum(lanes),
+                            whorli_dense_lane_sum(lanes + 8) - whorli_dense_lane_sum(lanes + 16));
 }
 
 /* y += factor x over rows first .. n - 1. */
@@ -892,10 +915,10 @@ static void whorli_dense_tile_complex(uint64_t count, uint64_t n, double *a, con
 static void whorli_dense_group(const whorli_dense *work, uint64_t column, uint64_t group, double *y)
 {
     whorli_dense_heads heads[4];
-    double re[4][8], im[8] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0};
+    double lanes[32]; /* eight for each of four real columns, or 24 for a complex one */
     double *a = work->a + column * work->rows;
     uint64_t k, row;
-    memset(re, 0, sizeof re);
+    memset(lanes, 0, sizeof lanes);
     for (k = 0; k < group; k++) {
         heads[k].v = whorli_dense_get(work, work->v, column + k);
         heads[k].w = whorli_dense_get(work, work->w, column + k);
@@ -906,7 +929,7 @@ static void whorli_dense_group(const whorli_dense *work, uint64_t column, uint64
         uint64_t count = work->n - row < WHORLI_DENSE_TILE ? work->n - row : WHORLI_DENSE_TILE;
         if (work->parts != 1) {
             whorli_dense_tile_complex(count, work->n, a + row, work->v + row, work->w + row, y + row, heads);
-            whorli_dense_lanes_complex(count, work->n, a + row, work->u + row, re[0], im);
+            whorli_dense_lanes_complex(count, work->n, a + row, work->u + row, lanes);
             continue;
         }
         if (group == 4)
@@ -914,12 +937,12 @@ static void whorli_dense_group(const whorli_dense *work, uint64_t column, uint64
         else
             whorli_dense_tile1(count, a + row, work->v + row, work->w + row, y + row, heads);
         for (k = 0; k < group; k++)
-            whorli_dense_lanes(count, a + k * work->n + row, work->u + row, re[k]);
+            whorli_dense_lanes(count, a + k * work->n + row, work->u + row, lanes + 8 * k);
     }
     for (k = 0; k < group; k++)
-        y[column + k] += whorli_dense_lane_sum(re[k]);
+        y[column + k] += whorli_dense_lane_sum(lanes + 8 * k);
     if (work->parts != 1)
-        y[work->n + column] += whorli_dense_lane_sum(im);
+        y[work->n + column] += whorli_dense_lane_sum(lanes + 8) - whorli_dense_lane_sum(lanes + 16);
 }
 
 /* Block b of a pass: what strip b has of the columns behind `step`. */
