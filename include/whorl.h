@@ -5,3 +5,4 @@
 #include "whorl_map.h"
 #include "whorl_dense.h"
 #include "whorl_lattice.h"
+#include "whorl_text.h"
