@@ -6,3 +6,4 @@
 #include "whorl_dense.h"
 #include "whorl_lattice.h"
 #include "whorl_text.h"
+#include "whorl_action.h"
