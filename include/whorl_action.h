@@ -128,38 +128,38 @@ WHORLI_ARITHMETIC_BEGIN
  */
 
 /* One term of one of the sums. */
-typedef struct whorli_entry {
+typedef struct whorli_action_entry {
     uint64_t x, z;
     double re, im; /* d = (-i)^popcount(x & z) c */
     uint64_t sum;
-} whorli_entry;
+} whorli_action_entry;
 
 /* One string: its entries are those from `first` on with the same masks. */
-typedef struct whorli_string {
+typedef struct whorli_action_string {
     uint64_t x, z;
     uint64_t first, count;
     double re, im;           /* weighted d */
     double next_re, next_im; /* while new weights are judged */
-} whorli_string;
+} whorli_action_string;
 
 /* One weighted term as the kernels see it. */
-typedef struct whorli_real_term {
+typedef struct whorli_action_real_term {
     uint64_t x, odd;    /* flip */
     uint64_t low, high; /* parts of z */
     double d;
-} whorli_real_term;
+} whorli_action_real_term;
 
 /* A low part of z with the terms that share it. */
-typedef struct whorli_character {
+typedef struct whorli_action_character {
     uint64_t low;
     uint64_t first, count; /* of the terms */
-} whorli_character;
+} whorli_action_character;
 
-typedef struct whorli_flip {
+typedef struct whorli_action_flip {
     uint64_t x, odd;
     uint64_t first_low, low_count;             /* terms without a high part */
     uint64_t first_character, character_count; /* the others */
-} whorli_flip;
+} whorli_action_flip;
 
 struct whorl_action {
     whorl_block block;
@@ -173,16 +173,16 @@ struct whorl_action {
     double norm_bound;
     uint64_t sum_count, entry_count, string_count;
     uint64_t term_count, character_count, flip_count;
-    whorli_entry *entries;   /* by x, z, sum */
-    whorli_string *strings;  /* by x, z */
-    whorli_real_term *terms; /* by x, odd, without a high part first, low, high */
-    whorli_character *characters;
-    whorli_flip *flips; /* by x, odd */
+    whorli_action_entry *entries;   /* by x, z, sum */
+    whorli_action_string *strings;  /* by x, z */
+    whorli_action_real_term *terms; /* by x, odd, without a high part first, low, high */
+    whorli_action_character *characters;
+    whorli_action_flip *flips; /* by x, odd */
 };
 
-static int32_t whorli_entry_order(const void *left, const void *right)
+static int32_t whorli_action_entry_order(const void *left, const void *right)
 {
-    const whorli_entry *a = (const whorli_entry *)left, *b = (const whorli_entry *)right;
+    const whorli_action_entry *a = (const whorli_action_entry *)left, *b = (const whorli_action_entry *)right;
     if (a->x != b->x)
         return a->x < b->x ? -1 : 1;
     if (a->z != b->z)
@@ -190,9 +190,10 @@ static int32_t whorli_entry_order(const void *left, const void *right)
     return a->sum < b->sum ? -1 : a->sum > b->sum;
 }
 
-static int32_t whorli_real_term_order(const void *left, const void *right)
+static int32_t whorli_action_real_term_order(const void *left, const void *right)
 {
-    const whorli_real_term *a = (const whorli_real_term *)left, *b = (const whorli_real_term *)right;
+    const whorli_action_real_term *a = (const whorli_action_real_term *)left,
+                                  *b = (const whorli_action_real_term *)right;
     if (a->x != b->x)
         return a->x < b->x ? -1 : 1;
     if (a->odd != b->odd)
@@ -211,7 +212,7 @@ static int32_t whorli_action_cut(int32_t sites)
 }
 
 /* (-i)^quarter (re + i im) */
-static whorl_complex whorli_turn(double re, double im, int32_t quarter)
+static whorl_complex whorli_action_turn(double re, double im, int32_t quarter)
 {
     switch (quarter & 3) {
     case 1:
@@ -289,11 +290,11 @@ static whorl_action *whorli_action_carve(whorl_layout *layout, whorl_action *pla
 {
     uint64_t n = plan->entry_count, reals = whorl_size_multiply(n, (uint64_t)plan->width);
     whorl_action *action = (whorl_action *)whorl_layout_carve(layout, 1, sizeof *action);
-    plan->entries = (whorli_entry *)whorl_layout_carve(layout, n, sizeof *plan->entries);
-    plan->strings = (whorli_string *)whorl_layout_carve(layout, n, sizeof *plan->strings);
-    plan->terms = (whorli_real_term *)whorl_layout_carve(layout, reals, sizeof *plan->terms);
-    plan->characters = (whorli_character *)whorl_layout_carve(layout, reals, sizeof *plan->characters);
-    plan->flips = (whorli_flip *)whorl_layout_carve(layout, reals, sizeof *plan->flips);
+    plan->entries = (whorli_action_entry *)whorl_layout_carve(layout, n, sizeof *plan->entries);
+    plan->strings = (whorli_action_string *)whorl_layout_carve(layout, n, sizeof *plan->strings);
+    plan->terms = (whorli_action_real_term *)whorl_layout_carve(layout, reals, sizeof *plan->terms);
+    plan->characters = (whorli_action_character *)whorl_layout_carve(layout, reals, sizeof *plan->characters);
+    plan->flips = (whorli_action_flip *)whorl_layout_carve(layout, reals, sizeof *plan->flips);
     return action;
 }
 
@@ -303,21 +304,21 @@ static void whorli_action_fill_strings(const whorl_action_desc *desc, whorl_acti
     for (k = 0; k < desc->sum_count; k++)
         for (i = 0; i < desc->sums[k].count; i++) {
             const whorl_term *term = desc->sums[k].terms + i;
-            whorl_complex d = whorli_turn(term->re, term->im, whorl_bits_count(term->x & term->z));
-            whorli_entry *entry = action->entries + at++;
+            whorl_complex d = whorli_action_turn(term->re, term->im, whorl_bits_count(term->x & term->z));
+            whorli_action_entry *entry = action->entries + at++;
             entry->x = term->x;
             entry->z = term->z;
             entry->re = d.re;
             entry->im = d.im;
             entry->sum = k;
-            sorted = sorted && (at < 2 || whorli_entry_order(entry - 1, entry) < 0);
+            sorted = sorted && (at < 2 || whorli_action_entry_order(entry - 1, entry) < 0);
         }
     if (!sorted)
-        whorl_sort(action->entries, at, sizeof *action->entries, whorli_entry_order);
+        whorl_sort(action->entries, at, sizeof *action->entries, whorli_action_entry_order);
     action->string_count = 0;
     for (i = 0; i < at; i++) {
-        const whorli_entry *entry = action->entries + i;
-        whorli_string *string = action->strings + action->string_count;
+        const whorli_action_entry *entry = action->entries + i;
+        whorli_action_string *string = action->strings + action->string_count;
         if (i == 0 || string[-1].x != entry->x || string[-1].z != entry->z) {
             memset(string, 0, sizeof *string);
             string->x = entry->x;
@@ -349,10 +350,10 @@ static whorl_status whorli_action_weigh(whorl_host *host, whorl_action *action, 
         }
     }
     for (i = 0; i < action->string_count; i++) {
-        whorli_string *string = action->strings + i;
+        whorli_action_string *string = action->strings + i;
         whorl_complex d = {0.0, 0.0};
         for (j = string->first; j < string->first + string->count; j++) {
-            const whorli_entry *entry = action->entries + j;
+            const whorli_action_entry *entry = action->entries + j;
             whorl_complex w = weights == NULL ? whorl_complex_of(1.0, 0.0) : weights[entry->sum];
             d.re += w.re * entry->re - w.im * entry->im;
             d.im += w.re * entry->im + w.im * entry->re;
@@ -372,7 +373,7 @@ static whorl_complex whorli_strings_factor(const whorl_action *action, uint64_t 
 {
     whorl_complex f = {0.0, 0.0};
     for (; first < end; first++) {
-        const whorli_string *string = action->strings + first;
+        const whorli_action_string *string = action->strings + first;
         double sign = whorl_bits_parity(string->z & t) ? -1.0 : 1.0;
         f.re += sign * string->next_re;
         f.im += sign * string->next_im;
@@ -393,9 +394,10 @@ static int32_t whorli_complex_above(whorl_complex f, double tolerance)
     return fabs(f.re) > tolerance || fabs(f.im) > tolerance;
 }
 
-static void whorli_text_add_string(whorl_text *text, const whorli_string *string)
+static void whorli_action_add_string(whorl_text *text, const whorli_action_string *string)
 {
-    whorl_complex c = whorli_turn(string->next_re, string->next_im, 4 - (whorl_bits_count(string->x & string->z) & 3));
+    whorl_complex c =
+        whorli_action_turn(string->next_re, string->next_im, 4 - (whorl_bits_count(string->x & string->z) & 3));
     uint64_t mask = string->x | string->z;
     whorl_text_add_real(text, c.im == 0.0 ? c.re : c.re == 0.0 ? c.im : c.re);
     if (c.im != 0.0) {
@@ -432,7 +434,7 @@ static whorl_status whorli_action_refuse(whorl_host *host, const whorl_action *a
     for (shown = first; shown < end && shown < first + 4; shown++) {
         if (shown > first)
             whorl_text_add(&text, "; ");
-        whorli_text_add_string(&text, action->strings + shown);
+        whorli_action_add_string(&text, action->strings + shown);
     }
     if (shown < end)
         whorl_text_add(&text, "; ...");
@@ -510,7 +512,7 @@ static int32_t whorli_patterns_vanish(const whorl_action *action, uint64_t first
                 uint64_t outside = action->strings[i].z & ~x;
                 whorl_complex sum = {0.0, 0.0};
                 for (j = first; j < end; j++) {
-                    const whorli_string *string = action->strings + j;
+                    const whorli_action_string *string = action->strings + j;
                     double sign = whorl_bits_parity(string->z & (pattern ^ x) & x) ? -1.0 : 1.0;
                     if ((string->z & ~x) != outside)
                         continue;
@@ -574,9 +576,9 @@ static whorl_status whorli_action_judge(whorl_host *host, const whorl_action *ac
 
 /* ---- >>weights --------------------------------------------------------------------------------------------------- */
 
-static void whorli_action_add_term(whorl_action *action, const whorli_string *string, uint64_t odd, double d)
+static void whorli_action_add_term(whorl_action *action, const whorli_action_string *string, uint64_t odd, double d)
 {
-    whorli_real_term *term = action->terms + action->term_count;
+    whorli_action_real_term *term = action->terms + action->term_count;
     if (d == 0.0)
         return;
     term->x = string->x;
@@ -591,22 +593,22 @@ static void whorli_action_add_term(whorl_action *action, const whorli_string *st
 static void whorli_action_fill_terms(whorl_action *action)
 {
     uint64_t i, sorted = 1;
-    whorli_flip *flip = NULL;
-    whorli_character *character = NULL;
+    whorli_action_flip *flip = NULL;
+    whorli_action_character *character = NULL;
     action->term_count = 0;
     for (i = 0; i < action->string_count; i++) {
-        const whorli_string *string = action->strings + i;
+        const whorli_action_string *string = action->strings + i;
         whorli_action_add_term(action, string, 0, string->re);
         if (action->width == 2)
             whorli_action_add_term(action, string, 1, -string->im);
     }
     for (i = 1; i < action->term_count && sorted; i++)
-        sorted = whorli_real_term_order(action->terms + i - 1, action->terms + i) < 0;
+        sorted = whorli_action_real_term_order(action->terms + i - 1, action->terms + i) < 0;
     if (!sorted)
-        whorl_sort(action->terms, action->term_count, sizeof *action->terms, whorli_real_term_order);
+        whorl_sort(action->terms, action->term_count, sizeof *action->terms, whorli_action_real_term_order);
     action->flip_count = action->character_count = 0;
     for (i = 0; i < action->term_count; i++) {
-        const whorli_real_term *term = action->terms + i;
+        const whorli_action_real_term *term = action->terms + i;
         int32_t fresh = i == 0 || term->x != term[-1].x || term->odd != term[-1].odd;
         if (fresh) {
             flip = action->flips + action->flip_count++;
@@ -639,7 +641,7 @@ static void whorli_action_settle(whorl_action *action)
     action->hermitian = action->same_space;
     action->norm_bound = 0.0;
     for (i = 0; i < action->string_count; i++) {
-        whorli_string *string = action->strings + i;
+        whorli_action_string *string = action->strings + i;
         double re = string->next_re, im = string->next_im;
         int32_t odd = whorl_bits_count(string->x & string->z) & 1;
         string->re = re;
@@ -731,14 +733,14 @@ typedef struct whorli_action_job {
 } whorli_action_job;
 
 /* f of a flip at the output t, by the rule. */
-static double whorli_flip_factor(const whorl_action *action, const whorli_flip *flip, uint64_t t)
+static double whorli_action_flip_factor(const whorl_action *action, const whorli_action_flip *flip, uint64_t t)
 {
     double f = 0.0;
     uint64_t i, j;
     for (i = flip->first_low; i < flip->first_low + flip->low_count; i++)
         f += whorl_bits_parity(action->terms[i].low & t) ? -action->terms[i].d : action->terms[i].d;
     for (i = flip->first_character; i < flip->first_character + flip->character_count; i++) {
-        const whorli_character *character = action->characters + i;
+        const whorli_action_character *character = action->characters + i;
         double e = 0.0;
         for (j = character->first; j < character->first + character->count; j++)
             e += whorl_bits_parity(action->terms[j].high & t) ? -action->terms[j].d : action->terms[j].d;
@@ -772,8 +774,8 @@ static void whorli_any_row(const whorli_action_job *job, uint64_t row, uint64_t 
     int32_t c, known = 0;
     memset(sums, 0, (size_t)count * (size_t)width * sizeof *sums);
     for (g = 0; g < action->flip_count; g++) {
-        const whorli_flip *flip = action->flips + g;
-        double f = whorli_flip_factor(action, flip, t);
+        const whorli_action_flip *flip = action->flips + g;
+        double f = whorli_action_flip_factor(action, flip, t);
         if (f == 0.0)
             continue;
         if (!known || flip->x != last) {
