@@ -7,3 +7,4 @@
 #include "whorl_lattice.h"
 #include "whorl_text.h"
 #include "whorl_action.h"
+#include "whorl_model.h"

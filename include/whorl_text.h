@@ -445,7 +445,7 @@ typedef struct whorli_value { /* a named vector or matrix */
     whorli_range slice[9];
 } whorli_value;
 
-enum { WHORLI_IS_PARAMETER, WHORLI_IS_VALUE, WHORLI_IS_LIST, WHORLI_IS_ELEMENT };
+enum { WHORLI_IS_PARAMETER, WHORLI_IS_VALUE, WHORLI_IS_LIST, WHORLI_IS_DRAW, WHORLI_IS_ELEMENT };
 typedef struct whorli_name {
     const char *text;
     uint64_t length;
@@ -514,7 +514,7 @@ enum {
 #define WHORLI_MOST_FACTORS 64         /* different atoms of one weight */
 #define WHORLI_MOST_POWER 1048576      /* of an atom in a weight */
 #define WHORLI_MOST_EXPONENT 1024      /* behind ^ */
-#define WHORLI_LOCALS 16               /* names that only hold inside one statement */
+#define WHORLI_LOCALS 24               /* names that only hold inside one statement */
 
 typedef struct whorli_loom {
     whorl_host *host;
@@ -1239,6 +1239,8 @@ static whorl_status whorli_compile_name(whorli_loom *loom)
         return whorli_reader_refuse(reader, at, "x is the vector product and stands between two vectors");
     if (name == NULL)
         return whorli_compile_unknown(loom);
+    if (name->role == WHORLI_IS_DRAW)
+        return whorli_reader_refuse(reader, at, "this random number belongs to another list: use it in a sum over that one");
     if (name->role == WHORLI_IS_LIST)
         return whorli_reader_refuse(reader, at, "this names a list: use it as `sum over NAME: ...`");
     status = whorli_compile_operand(loom, name->role == WHORLI_IS_PARAMETER ? WHORLI_DO_PARAMETER
@@ -2047,14 +2049,16 @@ static whorl_status whorli_expression_check(whorli_loom *loom, const whorl_expre
 typedef struct whorli_valuer {
     whorl_host *host;
     const whorl_expression *e;
-    const uint8_t *given; /* of each parameter: its value is set, its formula is not used; NULL: all are */
-    double *values;       /* of the parameters */
+    double *values; /* of the parameters */
+    uint8_t *given; /* of each parameter: its value is set, its formula is not used */
     whorl_complex *atom;
-    uint8_t *needed;
+    uint8_t *needed; /* of each atom */
 } whorli_valuer;
 
 static void whorli_valuer_layout(whorl_layout *layout, whorli_valuer *valuer)
 {
+    valuer->values = (double *)whorl_layout_carve(layout, valuer->e->parameters, sizeof(double));
+    valuer->given = (uint8_t *)whorl_layout_carve(layout, valuer->e->parameters, 1);
     valuer->atom = (whorl_complex *)whorl_layout_carve(layout, valuer->e->atoms, sizeof(whorl_complex));
     valuer->needed = (uint8_t *)whorl_layout_carve(layout, valuer->e->atoms, 1);
 }
@@ -2076,7 +2080,7 @@ static void whorli_valuer_need(whorli_valuer *valuer, whorli_range polynomial)
 
 static int32_t whorli_valuer_follows(const whorli_valuer *valuer, const whorli_atom *atom)
 {
-    return atom->kind == WHORLI_ATOM_PARAMETER && valuer->given != NULL && !valuer->given[atom->parameter];
+    return atom->kind == WHORLI_ATOM_PARAMETER && !valuer->given[atom->parameter];
 }
 
 /* The value of a monomial; *zero becomes the atom that stands in a denominator and is 0, or stays. */
@@ -2250,7 +2254,9 @@ whorl_status whorl_expression_weights(whorl_host *host, const whorl_expression *
     status = whorli_valuer_take(&valuer, host, e, &block);
     if (status != WHORL_OK)
         return status;
-    valuer.values = (double *)(uintptr_t)values; /* all are given: none is written */
+    whorli_copy(valuer.values, values, e->parameters, sizeof(double));
+    if (e->parameters > 0)
+        memset(valuer.given, 1, (size_t)e->parameters);
     for (k = 0; k < e->sum_count; k++)
         whorli_valuer_need_weight(&valuer, e->sum_weight[k]);
     status = whorli_valuer_run(&valuer);
