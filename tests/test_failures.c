@@ -776,6 +776,120 @@ static whorl_status case_expression_weights(attempt *a) { return expression_call
 static whorl_status case_expression_sum(attempt *a) { return expression_call(a, EXPRESSION_SUM); }
 static whorl_status case_expression_weight_write(attempt *a) { return expression_call(a, WEIGHT_WRITE); }
 
+/* ---- models ------------------------------------------------------------------------------------------------------ */
+
+static const char model_text[] =
+    "title an invented ring\n"
+    "cluster square by (2, 0) (0, 3)\n"
+    "let J = 1.5\n"
+    "let D = 0.2*J/(1 + J)\n"
+    "let g = (2, 0, 0; 0, 2.1, 0; 0, 0, 2.2)\n"
+    "pairs near: shell 1\n"
+    "pairs table with K: 0-1 0.5 2-4 0.25\n"
+    "draw dJ over near normal 0 0.1 seed 4\n"
+    "sum over near: (J + dJ)*S[i].S[j] + (0, 0, D).(S[i] x S[j])\n"
+    "sum over table: K*Z[i]*Z[j]\n"
+    "sum over spins: 0.3*(0, 0, 1).g.S[i]\n"
+    "add 0.125*X[0]*X[1]\n";
+enum { MODEL_LENGTH = sizeof model_text - 1 };
+
+static void digest_model(attempt *a, const whorl_model *model)
+{
+    uint64_t k;
+    for (k = 0; k < whorl_model_sum_count(model); k++) {
+        const whorl_sum *sum = whorl_model_sums(model) + k;
+        digest(a, sum->terms, sum->count * sizeof(whorl_term));
+    }
+    digest(a, whorl_model_title(model), strlen(whorl_model_title(model)));
+}
+
+static whorl_status case_model_read(attempt *a)
+{
+    whorl_host own = whorl_host_default();
+    whorl_model *model = (whorl_model *)&own;
+    whorl_status status;
+    CHECK_STATUS(whorl_model_bytes(&own, model_text, MODEL_LENGTH, 3, &a->bytes), WHORL_OK, &own);
+    status = CALL(whorl_model_read(a->host, model_text, MODEL_LENGTH, 3, &model));
+    call_end();
+    if (status != WHORL_OK)
+        CHECK(model == NULL);
+    else
+        digest_model(a, model);
+    whorl_model_free(a->host, model);
+    return status;
+}
+
+static whorl_status case_model_bytes(attempt *a)
+{
+    uint64_t bytes = 77;
+    whorl_status status = CALL(whorl_model_bytes(a->host, model_text, MODEL_LENGTH, 3, &bytes));
+    call_end();
+    if (status != WHORL_OK) {
+        CHECK(bytes == 77);
+    } else { /* it reads in order to tell, and takes no more than it tells */
+        a->bytes = bytes;
+        a->bound = 2;
+    }
+    digest(a, &bytes, 8);
+    return status;
+}
+
+enum { MODEL_VALUES, MODEL_WEIGHTS, MODEL_SUM, MODEL_WEIGHT_WRITE };
+static whorl_status model_call(attempt *a, int which)
+{
+    whorl_host own = whorl_host_default();
+    whorl_model *model = NULL;
+    whorl_setting set = {0, 2.5};
+    whorl_complex weights[64];
+    whorl_term terms[256];
+    whorl_sum sum;
+    whorl_status status;
+    char text[256];
+    double values[8], given[8];
+    uint64_t used = 77, count;
+    CHECK_STATUS(whorl_model_read(&own, model_text, MODEL_LENGTH, 3, &model), WHORL_OK, &own);
+    count = whorl_model_sum_count(model);
+    CHECK(count <= 64 && whorl_model_term_count(model) <= 256 && whorl_model_parameter_count(model) <= 8);
+    CHECK_STATUS(whorl_model_values(&own, model, NULL, 0, given), WHORL_OK, &own);
+    mark(values, sizeof values);
+    mark(weights, sizeof weights);
+    mark(terms, sizeof terms);
+    mark(&sum, sizeof sum);
+    mark(text, sizeof text);
+    switch (which) {
+    case MODEL_VALUES:
+        a->bytes = whorl_model_values_bytes(model);
+        status = CALL(whorl_model_values(a->host, model, &set, 1, values));
+        break;
+    case MODEL_WEIGHTS:
+        a->bytes = whorl_model_values_bytes(model);
+        status = CALL(whorl_model_weights(a->host, model, given, weights));
+        break;
+    case MODEL_SUM:
+        a->bytes = whorl_model_values_bytes(model) + whorl_block_bytes(count * sizeof(whorl_complex));
+        status = CALL(whorl_model_sum(a->host, model, given, terms, 256, &sum));
+        break;
+    default: status = CALL(whorl_model_weight_write(a->host, model, 1, text, sizeof text, &used)); break;
+    }
+    call_end();
+    if (status != WHORL_OK)
+        CHECK(is_marked(values, sizeof values) && is_marked(weights, sizeof weights) && is_marked(&sum, sizeof sum) &&
+              used == 77);
+    if (refused(status))
+        CHECK(is_marked(terms, sizeof terms) && is_marked(text, sizeof text));
+    digest(a, values, sizeof values);
+    digest(a, weights, sizeof weights);
+    digest(a, text, sizeof text);
+    if (status == WHORL_OK && which == MODEL_SUM)
+        digest(a, sum.terms, sum.count * sizeof(whorl_term));
+    whorl_model_free(&own, model);
+    return status;
+}
+static whorl_status case_model_values(attempt *a) { return model_call(a, MODEL_VALUES); }
+static whorl_status case_model_weights(attempt *a) { return model_call(a, MODEL_WEIGHTS); }
+static whorl_status case_model_sum(attempt *a) { return model_call(a, MODEL_SUM); }
+static whorl_status case_model_weight_write(attempt *a) { return model_call(a, MODEL_WEIGHT_WRITE); }
+
 /* ---- actions ----------------------------------------------------------------------------------------------------- */
 
 enum { CHAIN = 10, CHAIN_TERMS = 6 * CHAIN };
@@ -961,6 +1075,12 @@ static const failure_case cases[] = {
     {"whorl_expression_weights", case_expression_weights},
     {"whorl_expression_sum", case_expression_sum},
     {"whorl_expression_weight_write", case_expression_weight_write},
+    {"whorl_model_read", case_model_read},
+    {"whorl_model_bytes", case_model_bytes},
+    {"whorl_model_values", case_model_values},
+    {"whorl_model_weights", case_model_weights},
+    {"whorl_model_sum", case_model_sum},
+    {"whorl_model_weight_write", case_model_weight_write},
     {"whorl_action_make (all)", case_action_all},
     {"whorl_action_make (down, complex)", case_action_down},
     {"whorl_action_make (blockade)", case_action_blockade},
