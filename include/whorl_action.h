@@ -155,11 +155,60 @@ typedef struct whorli_action_character {
     uint64_t first, count; /* of the terms */
 } whorli_action_character;
 
+/* Parities of so many independent masks give the factor of a simple flip, from a table. */
+#define WHORLI_SIMPLE_RANK 4
+
 typedef struct whorli_action_flip {
     uint64_t x, odd;
     uint64_t first_low, low_count;             /* terms without a high part */
     uint64_t first_character, character_count; /* the others */
+    int32_t rank;                              /* independent parities of its z masks; -1: more than the simple rank */
+    uint32_t list;                             /* in a split space: its number among the flips with lists */
+    uint64_t basis[WHORLI_SIMPLE_RANK];
+    uint64_t first_value; /* factor = values[first_value + parities of t with the basis] */
 } whorli_action_flip;
+
+/* See >>split. */
+typedef struct whorli_split_near {
+    uint16_t to, value;
+} whorli_split_near;
+typedef struct whorli_split_pair {
+    uint16_t row, from;
+} whorli_split_pair;
+typedef struct whorli_split_pairs {
+    uint32_t first, count; /* of the pairs */
+    uint32_t from_class, pattern;
+} whorli_split_pairs;
+
+typedef struct whorli_split {
+    int32_t used; /* the space and the structure permit it */
+    int32_t fits; /* and so do the weighted terms */
+    int32_t low_sites, high_sites;
+    uint64_t lows, highs; /* 2^low_sites, 2^high_sites */
+    uint64_t classes, longest;
+    uint64_t group_rows, group_room, group_count;
+    uint64_t near_room, list_room, pairs_room; /* entries; flips with lists; directory entries a flip */
+    uint64_t list_count, most_values;
+    uint64_t near_values; /* values of near flips come first */
+    int32_t has_odd;
+    uint64_t first_far;                  /* flips from here on change the high part */
+    uint64_t *start;                     /* [highs]: index of the row's first state */
+    uint32_t *need;                      /* [highs]: class of the row's low parts; UINT32_MAX: no such row */
+    uint32_t *order;                     /* [highs]: rows by class, ascending in each */
+    uint32_t *class_row;                 /* [classes + 1]: where each class starts there */
+    uint32_t *low;                       /* [lows]: low parts by class, ascending in each */
+    uint32_t *class_low;                 /* [classes + 1] */
+    uint32_t *class_of;                  /* [lows] */
+    uint32_t *rank;                      /* [lows]: place in its class */
+    uint32_t *group_class, *group_first; /* [group_room]: class and first row, in `order`, of each group of rows */
+    double *diagonal;                    /* [lows]: as `low`: the part of the diagonal without high parts */
+    uint64_t *signs;      /* [lows]: as `low`: bit j: the parity with the low part of the diagonal's character j */
+    uint32_t *near_start; /* [lows + 1]: as `low` */
+    whorli_split_near *near_flips; /* [near_room] */
+    uint32_t *directory;           /* [list_room * (classes + 1)]: where each class starts in `lists` */
+    whorli_split_pairs *lists;     /* [list_room * pairs_room] */
+    whorli_split_pair *pairs;      /* [list_room * lows] */
+} whorli_split;
 
 struct whorl_action {
     whorl_block block;
@@ -178,6 +227,8 @@ struct whorl_action {
     whorli_action_real_term *terms; /* by x, odd, without a high part first, low, high */
     whorli_action_character *characters;
     whorli_action_flip *flips; /* by x, odd */
+    double *values;            /* factors of simple flips */
+    whorli_split split;
 };
 
 static int32_t whorli_action_entry_order(const void *left, const void *right)
@@ -205,10 +256,13 @@ static int32_t whorli_action_real_term_order(const void *left, const void *right
     return a->high < b->high ? -1 : a->high > b->high;
 }
 
-/* Sites in the low part: rows of the kernels are as long as the low parts are many. */
+/*
+ * Sites in the low part: rows of the kernels are as long as the low parts are many. Eight rows are worked on at a time,
+ * so small systems keep three sites for the high part.
+ */
 static int32_t whorli_action_cut(int32_t sites)
 {
-    return sites <= 12 ? sites : sites <= 24 ? 12 : sites / 2;
+    return sites <= 3 ? sites : sites <= 15 ? sites - 3 : sites <= 24 ? 12 : sites / 2;
 }
 
 /* (-i)^quarter (re + i im) */
@@ -225,6 +279,30 @@ static whorl_complex whorli_action_turn(double re, double im, int32_t quarter)
         return whorl_complex_of(re, im);
     }
 }
+
+/* 1 if an earlier sum of the list has this flip. */
+static int32_t whorli_action_seen(const whorl_action_desc *desc, uint64_t k, uint64_t x)
+{
+    uint64_t j;
+    for (j = 0; j < k; j++) {
+        uint64_t low = 0, high = desc->sums[j].count;
+        while (low < high) {
+            uint64_t middle = low + (high - low) / 2;
+            if (desc->sums[j].terms[middle].x < x)
+                low = middle + 1;
+            else
+                high = middle;
+        }
+        if (low < desc->sums[j].count && desc->sums[j].terms[low].x == x)
+            return 1;
+    }
+    return 0;
+}
+
+static void whorli_split_plan(const whorl_action_desc *desc, whorl_action *plan);
+static void whorli_split_carve(whorl_layout *layout, whorl_action *plan);
+static void whorli_split_fill_space(whorl_action *action);
+static void whorli_split_fill_terms(whorl_action *action);
 
 /* Fills what is known before anything is allocated: sizes, modes, element type. */
 static whorl_status whorli_action_plan(whorl_host *host, const whorl_action_desc *desc, whorl_action *plan)
@@ -283,6 +361,7 @@ static whorl_status whorli_action_plan(whorl_host *host, const whorl_action_desc
                           "the operator is not real: choose complex elements, or rotate it with whorl_sum_real_gauge");
     plan->width = whorl_element_is_complex(plan->element) ? 2 : 1;
     plan->cut = whorli_action_cut(plan->sites);
+    whorli_split_plan(desc, plan);
     return WHORL_OK;
 }
 
@@ -295,6 +374,8 @@ static whorl_action *whorli_action_carve(whorl_layout *layout, whorl_action *pla
     plan->terms = (whorli_action_real_term *)whorl_layout_carve(layout, reals, sizeof *plan->terms);
     plan->characters = (whorli_action_character *)whorl_layout_carve(layout, reals, sizeof *plan->characters);
     plan->flips = (whorli_action_flip *)whorl_layout_carve(layout, reals, sizeof *plan->flips);
+    plan->values = (double *)whorl_layout_carve(layout, whorl_size_multiply(reals, 4), sizeof *plan->values);
+    whorli_split_carve(layout, plan);
     return action;
 }
 
@@ -634,6 +715,80 @@ static void whorli_action_fill_terms(whorl_action *action)
     }
 }
 
+/* f of a flip at the output t, by the rule. */
+static double whorli_action_flip_factor(const whorl_action *action, const whorli_action_flip *flip, uint64_t t)
+{
+    double f = 0.0;
+    uint64_t i, j;
+    for (i = flip->first_low; i < flip->first_low + flip->low_count; i++)
+        f += whorl_bits_parity(action->terms[i].low & t) ? -action->terms[i].d : action->terms[i].d;
+    for (i = flip->first_character; i < flip->first_character + flip->character_count; i++) {
+        const whorli_action_character *character = action->characters + i;
+        double e = 0.0;
+        for (j = character->first; j < character->first + character->count; j++)
+            e += whorl_bits_parity(action->terms[j].high & t) ? -action->terms[j].d : action->terms[j].d;
+        f += whorl_bits_parity(character->low & t) ? -e : e;
+    }
+    return f;
+}
+
+/* Parities of t with the basis of a simple flip: the place in its table. */
+static uint64_t whorli_action_pattern(const whorli_action_flip *flip, uint64_t t)
+{
+    uint64_t pattern = 0;
+    int32_t k;
+    for (k = 0; k < flip->rank; k++)
+        pattern |= (uint64_t)whorl_bits_parity(flip->basis[k] & t) << k;
+    return pattern;
+}
+
+/*
+ * The basis of the z masks of a flip, in echelon form: each mask has a leading bit that no other has, so that a t with
+ * a wanted pattern is the sum of the leading bits wanted.
+ */
+static void whorli_action_fill_basis(const whorl_action *action, whorli_action_flip *flip, uint64_t end)
+{
+    uint64_t i;
+    flip->rank = 0;
+    for (i = flip->first_low; i < end; i++) {
+        uint64_t z = action->terms[i].low | action->terms[i].high, lead;
+        int32_t k;
+        for (k = 0; k < flip->rank; k++)
+            if ((z >> whorl_bits_highest(flip->basis[k]) & 1) != 0)
+                z ^= flip->basis[k];
+        if (z == 0)
+            continue;
+        if (flip->rank == WHORLI_SIMPLE_RANK) {
+            flip->rank = -1;
+            return;
+        }
+        lead = UINT64_C(1) << whorl_bits_highest(z);
+        for (k = 0; k < flip->rank; k++)
+            if ((flip->basis[k] & lead) != 0)
+                flip->basis[k] ^= z;
+        flip->basis[flip->rank++] = z;
+    }
+}
+
+static void whorli_action_fill_values(whorl_action *action)
+{
+    uint64_t g, p, used = 0;
+    int32_t k;
+    for (g = 0; g < action->flip_count; g++) {
+        whorli_action_flip *flip = action->flips + g;
+        uint64_t end = g + 1 < action->flip_count ? flip[1].first_low : action->term_count;
+        whorli_action_fill_basis(action, flip, end);
+        flip->first_value = used;
+        for (p = 0; flip->rank >= 0 && p < UINT64_C(1) << flip->rank; p++) {
+            uint64_t t = 0;
+            for (k = 0; k < flip->rank; k++)
+                if ((p >> k & 1) != 0)
+                    t |= UINT64_C(1) << whorl_bits_highest(flip->basis[k]);
+            action->values[used++] = whorli_action_flip_factor(action, flip, t);
+        }
+    }
+}
+
 /* Takes the judged weights over. */
 static void whorli_action_settle(whorl_action *action)
 {
@@ -653,6 +808,9 @@ static void whorli_action_settle(whorl_action *action)
         action->norm_bound = 0.0;
     action->norm_bound *= 1.0 + 1e-12; /* rounding of the sum */
     whorli_action_fill_terms(action);
+    whorli_action_fill_values(action);
+    if (action->split.used)
+        whorli_split_fill_terms(action);
 }
 
 whorl_status whorl_action_reweight(whorl_host *host, whorl_action *action, const whorl_complex *weights)
@@ -704,6 +862,8 @@ whorl_status whorl_action_make(whorl_host *host, const whorl_action_desc *desc, 
     plan.block = block;
     *made = plan;
     whorli_action_fill_strings(desc, made);
+    if (made->split.used)
+        whorli_split_fill_space(made);
     status = whorl_action_reweight(host, made, desc->weights);
     if (status == WHORL_OK)
         *action = made;
@@ -732,23 +892,6 @@ typedef struct whorli_action_job {
     int32_t count;               /* columns */
 } whorli_action_job;
 
-/* f of a flip at the output t, by the rule. */
-static double whorli_action_flip_factor(const whorl_action *action, const whorli_action_flip *flip, uint64_t t)
-{
-    double f = 0.0;
-    uint64_t i, j;
-    for (i = flip->first_low; i < flip->first_low + flip->low_count; i++)
-        f += whorl_bits_parity(action->terms[i].low & t) ? -action->terms[i].d : action->terms[i].d;
-    for (i = flip->first_character; i < flip->first_character + flip->character_count; i++) {
-        const whorli_action_character *character = action->characters + i;
-        double e = 0.0;
-        for (j = character->first; j < character->first + character->count; j++)
-            e += whorl_bits_parity(action->terms[j].high & t) ? -action->terms[j].d : action->terms[j].d;
-        f += whorl_bits_parity(character->low & t) ? -e : e;
-    }
-    return f;
-}
-
 static double whorli_real_at(whorl_element element, const char *vector, uint64_t i)
 {
     return whorl_element_is_float(element) ? (double)((const float *)(const void *)vector)[i]
@@ -775,7 +918,8 @@ static void whorli_any_row(const whorli_action_job *job, uint64_t row, uint64_t 
     memset(sums, 0, (size_t)count * (size_t)width * sizeof *sums);
     for (g = 0; g < action->flip_count; g++) {
         const whorli_action_flip *flip = action->flips + g;
-        double f = whorli_action_flip_factor(action, flip, t);
+        double f = flip->rank < 0 ? whorli_action_flip_factor(action, flip, t)
+                                  : action->values[flip->first_value + whorli_action_pattern(flip, t)];
         if (f == 0.0)
             continue;
         if (!known || flip->x != last) {
@@ -818,6 +962,741 @@ static void whorli_any_body(void *argument, uint64_t block, int32_t worker)
     }
 }
 
+/* ---- >>split -----------------------------------------------------------------------------------------------------
+ *
+ * All states, parities and fixed numbers of up to 32 sites, source equal to target. The low part of a state has a
+ * class: nothing, a parity, the numbers of down spins in its share of each mask. A row is a high part with all low
+ * parts of the one class that it needs: contiguous in the vector. Rows of one class have equal shape, so eight of them
+ * (four complex) are packed as lanes, and everything that keeps the high part, the near flips, goes through one list of
+ * neighbours for the class, one vector operation an entry. Flips that change the high part, the far ones, follow row by
+ * row: a whole row where they keep the low part and the factor, otherwise lists of pairs shared by all rows of the
+ * class.
+ */
+
+#define WHORLI_LANES 8
+#define WHORLI_SPLIT_SITES 32
+#define WHORLI_SPLIT_CLASSES 4096
+#define WHORLI_SPLIT_CHARACTERS 64
+/* Tables may take so much more than a vector does. */
+#define WHORLI_SPLIT_ROOM (UINT64_C(1) << 26)
+
+static uint64_t whorli_split_classes(const whorl_action *plan)
+{
+    const whorl_space *space = plan->source;
+    uint64_t low = whorl_bits_low(plan->cut), classes = 1;
+    int32_t k;
+    if (whorl_space_kind_of(space) == WHORL_SPACE_ALL)
+        return 1;
+    if (whorl_space_kind_of(space) == WHORL_SPACE_PARITY)
+        return 2;
+    if (whorl_space_kind_of(space) != WHORL_SPACE_DOWN)
+        return 0;
+    for (k = 0; k < whorl_space_number_count(space) && classes <= WHORLI_SPLIT_CLASSES; k++)
+        classes *= (uint64_t)whorl_bits_count(whorl_space_number_at(space, k).mask & low) + 1;
+    return classes <= WHORLI_SPLIT_CLASSES ? classes : 0;
+}
+
+static uint64_t whorli_split_class(const whorl_action *action, uint64_t low)
+{
+    const whorl_space *space = action->source;
+    uint64_t inside = whorl_bits_low(action->cut), key = 0;
+    int32_t k;
+    if (whorl_space_kind_of(space) == WHORL_SPACE_PARITY)
+        return (uint64_t)whorl_bits_parity(low & whorl_space_parity_mask(space));
+    for (k = whorl_space_number_count(space); k-- > 0;) {
+        uint64_t mask = whorl_space_number_at(space, k).mask & inside;
+        key = key * ((uint64_t)whorl_bits_count(mask) + 1) + (uint64_t)whorl_bits_count(low & mask);
+    }
+    return key;
+}
+
+/* The class that a high part (in its place) needs; UINT32_MAX: none. */
+static uint32_t whorli_split_need(const whorl_action *action, uint64_t high)
+{
+    const whorl_space *space = action->source;
+    uint64_t inside = whorl_bits_low(action->cut), key = 0;
+    int32_t k;
+    if (whorl_space_kind_of(space) == WHORL_SPACE_PARITY)
+        return (uint32_t)(whorl_space_parity(space) ^ whorl_bits_parity(high & whorl_space_parity_mask(space)));
+    for (k = whorl_space_number_count(space); k-- > 0;) {
+        whorl_down_number number = whorl_space_number_at(space, k);
+        int32_t room = whorl_bits_count(number.mask & inside),
+                rest = number.down - whorl_bits_count(number.mask & high);
+        if (rest < 0 || rest > room)
+            return UINT32_MAX;
+        key = key * ((uint64_t)room + 1) + (uint64_t)rest;
+    }
+    return (uint32_t)key;
+}
+
+/* Counts what the tables need, flip by flip of the structure, and decides whether the space is split. */
+static void whorli_split_plan(const whorl_action_desc *desc, whorl_action *plan)
+{
+    whorli_split *split = &plan->split;
+    uint64_t k, i, low = whorl_bits_low(plan->cut), width = (uint64_t)plan->width, bytes;
+    split->classes = whorli_split_classes(plan);
+    if (!plan->same_space || plan->sites > WHORLI_SPLIT_SITES || split->classes == 0)
+        return;
+    split->low_sites = plan->cut;
+    split->high_sites = plan->sites - plan->cut;
+    split->lows = UINT64_C(1) << split->low_sites;
+    split->highs = UINT64_C(1) << split->high_sites;
+    split->group_rows = WHORLI_LANES / width;
+    split->group_room = split->highs / split->group_rows + split->classes + 1;
+    split->pairs_room = 16 * ((uint64_t)split->low_sites + 1) * split->classes;
+    split->pairs_room = split->pairs_room < split->lows ? split->pairs_room : split->lows;
+    for (k = 0; k < desc->sum_count; k++)
+        for (i = 0; i < desc->sums[k].count;) {
+            const whorl_term *terms = desc->sums[k].terms;
+            uint64_t x = terms[i].x, z = 0;
+            for (; i < desc->sums[k].count && terms[i].x == x; i++)
+                z |= terms[i].z;
+            if (desc->sum_count <= 64 && whorli_action_seen(desc, k, x) && ((z & low) == 0 || (x & low) != 0))
+                continue;
+            if ((x & ~low) == 0)
+                split->near_room += split->lows * (x == 0 ? width - 1 : width);
+            else if (((x | z) & low) != 0)
+                split->list_room += width;
+        }
+    bytes = 4 * split->near_room + split->list_room * (4 * split->lows + 16 * split->pairs_room + 4 * split->classes);
+    split->used =
+        bytes <= WHORLI_SPLIT_ROOM + 2 * whorl_space_count(plan->source) * whorl_element_bytes(plan->element) &&
+        split->near_room < UINT32_MAX && split->list_room * split->lows < UINT32_MAX;
+}
+
+static void whorli_split_carve(whorl_layout *layout, whorl_action *plan)
+{
+    whorli_split *split = &plan->split;
+    uint64_t lows = split->lows, highs = split->highs, classes = split->classes;
+    if (!split->used)
+        return;
+    split->start = (uint64_t *)whorl_layout_carve(layout, highs, sizeof *split->start);
+    split->need = (uint32_t *)whorl_layout_carve(layout, highs, sizeof *split->need);
+    split->order = (uint32_t *)whorl_layout_carve(layout, highs, sizeof *split->order);
+    split->class_row = (uint32_t *)whorl_layout_carve(layout, classes + 1, sizeof *split->class_row);
+    split->low = (uint32_t *)whorl_layout_carve(layout, lows, sizeof *split->low);
+    split->class_low = (uint32_t *)whorl_layout_carve(layout, classes + 1, sizeof *split->class_low);
+    split->class_of = (uint32_t *)whorl_layout_carve(layout, lows, sizeof *split->class_of);
+    split->rank = (uint32_t *)whorl_layout_carve(layout, lows, sizeof *split->rank);
+    split->group_class = (uint32_t *)whorl_layout_carve(layout, split->group_room, sizeof *split->group_class);
+    split->group_first = (uint32_t *)whorl_layout_carve(layout, split->group_room, sizeof *split->group_first);
+    split->diagonal = (double *)whorl_layout_carve(layout, lows, sizeof *split->diagonal);
+    split->signs = (uint64_t *)whorl_layout_carve(layout, lows, sizeof *split->signs);
+    split->near_start = (uint32_t *)whorl_layout_carve(layout, lows + 1, sizeof *split->near_start);
+    split->near_flips = (whorli_split_near *)whorl_layout_carve(layout, split->near_room, sizeof *split->near_flips);
+    split->directory =
+        (uint32_t *)whorl_layout_carve(layout, split->list_room * (classes + 1), sizeof *split->directory);
+    split->lists =
+        (whorli_split_pairs *)whorl_layout_carve(layout, split->list_room * split->pairs_room, sizeof *split->lists);
+    split->pairs = (whorli_split_pair *)whorl_layout_carve(layout, split->list_room * lows, sizeof *split->pairs);
+}
+
+/* Counting sort: `of` gives the class of each of n things; first[c] becomes where class c starts in `sorted`. */
+static void whorli_split_sort(const uint32_t *of, uint64_t n, uint64_t classes, uint32_t *first, uint32_t *sorted)
+{
+    uint64_t i, c;
+    memset(first, 0, (size_t)(classes + 1) * sizeof *first);
+    for (i = 0; i < n; i++)
+        if (of[i] != UINT32_MAX)
+            first[of[i] + 1]++;
+    for (c = 0; c < classes; c++)
+        first[c + 1] += first[c];
+    for (i = 0; i < n; i++)
+        if (of[i] != UINT32_MAX)
+            sorted[first[of[i]]++] = (uint32_t)i;
+    for (c = classes; c > 0; c--)
+        first[c] = first[c - 1];
+    first[0] = 0;
+}
+
+/* What depends on the space alone. */
+static void whorli_split_fill_space(whorl_action *action)
+{
+    whorli_split *split = &action->split;
+    uint64_t i, c, at = 0, index = 0;
+    for (i = 0; i < split->lows; i++)
+        split->class_of[i] = (uint32_t)whorli_split_class(action, i);
+    for (i = 0; i < split->highs; i++)
+        split->need[i] = whorli_split_need(action, i << split->low_sites);
+    whorli_split_sort(split->class_of, split->lows, split->classes, split->class_low, split->low);
+    whorli_split_sort(split->need, split->highs, split->classes, split->class_row, split->order);
+    split->longest = 0;
+    for (c = 0; c < split->classes; c++) {
+        uint64_t length = split->class_low[c + 1] - split->class_low[c];
+        for (i = 0; i < length; i++)
+            split->rank[split->low[split->class_low[c] + i]] = (uint32_t)i;
+        if (split->class_row[c + 1] > split->class_row[c] && length > split->longest)
+            split->longest = length;
+        for (i = split->class_row[c]; i < split->class_row[c + 1]; i += split->group_rows) {
+            split->group_class[at] = (uint32_t)c;
+            split->group_first[at++] = (uint32_t)i;
+        }
+    }
+    split->group_count = at;
+    for (i = 0; i < split->highs; i++) {
+        split->start[i] = index;
+        if (split->need[i] != UINT32_MAX)
+            index += split->class_low[split->need[i] + 1] - split->class_low[split->need[i]];
+    }
+}
+
+static int32_t whorli_split_basis_in(const whorli_action_flip *flip, uint64_t mask)
+{
+    int32_t k;
+    for (k = 0; k < flip->rank; k++)
+        if ((flip->basis[k] & mask) != 0)
+            return 1;
+    return 0;
+}
+
+/* The even diagonal, which may be of any rank; NULL where there is none. */
+static const whorli_action_flip *whorli_action_diagonal(const whorl_action *action)
+{
+    return action->flip_count > 0 && action->flips[0].x == 0 && action->flips[0].odd == 0 ? action->flips : NULL;
+}
+
+static void whorli_split_fill_diagonal(whorl_action *action)
+{
+    whorli_split *split = &action->split;
+    const whorli_action_flip *flip = whorli_action_diagonal(action);
+    uint64_t i, j;
+    if (flip == NULL)
+        return;
+    memset(split->diagonal, 0, (size_t)split->lows * sizeof *split->diagonal);
+    for (j = flip->first_low; j < flip->first_low + flip->low_count; j++) {
+        double d = action->terms[j].d;
+        uint64_t z = action->terms[j].low;
+        for (i = 0; i < split->lows; i++)
+            split->diagonal[i] += whorl_bits_parity(z & split->low[i]) ? -d : d;
+    }
+    for (i = 0; i < split->lows; i++) {
+        uint64_t signs = 0;
+        for (j = 0; j < flip->character_count; j++) {
+            uint64_t low = action->characters[flip->first_character + j].low;
+            signs |= (uint64_t)whorl_bits_parity(low & split->low[i]) << j;
+        }
+        split->signs[i] = signs;
+    }
+}
+
+/* Neighbours of each low part within its class, in order of the flips. */
+static void whorli_split_fill_near(whorl_action *action)
+{
+    whorli_split *split = &action->split;
+    uint64_t i, g, used = 0, high = ~whorl_bits_low(action->cut);
+    uint64_t first = whorli_action_diagonal(action) != NULL ? 1 : 0;
+    for (i = 0; i < split->lows; i++) {
+        uint64_t low = split->low[i], c = split->class_of[low];
+        uint64_t length = split->class_low[c + 1] - split->class_low[c];
+        split->near_start[i] = (uint32_t)used;
+        for (g = first; g < split->first_far; g++) {
+            const whorli_action_flip *flip = action->flips + g;
+            uint64_t other = low ^ flip->x, value = flip->first_value + whorli_action_pattern(flip, low);
+            if (split->class_of[other] != c || (action->values[value] == 0.0 && !whorli_split_basis_in(flip, high)))
+                continue;
+            split->near_flips[used].to = (uint16_t)(split->rank[other] + (flip->odd ? length : 0));
+            split->near_flips[used++].value = (uint16_t)value;
+        }
+    }
+    split->near_start[i] = (uint32_t)used;
+}
+
+/*
+ * The pairs of a far flip: for each class, lists of equal class on the other side and equal pattern of the low part, in
+ * order of the low parts.
+ */
+static void whorli_split_fill_list(whorl_action *action, const whorli_action_flip *flip)
+{
+    whorli_split *split = &action->split;
+    uint64_t change = flip->x & whorl_bits_low(action->cut), c, i, j;
+    uint32_t *directory = split->directory + flip->list * (split->classes + 1);
+    whorli_split_pairs *lists = split->lists + flip->list * split->pairs_room;
+    whorli_split_pair *pairs = split->pairs + flip->list * split->lows;
+    uint32_t list_count = 0, at = 0;
+    for (c = 0; c < split->classes; c++) {
+        uint64_t begin = split->class_low[c], end = split->class_low[c + 1];
+        directory[c] = list_count;
+        for (i = begin; i < end; i++) { /* which lists there are, and how long */
+            uint64_t low = split->low[i];
+            uint32_t from = split->class_of[low ^ change], pattern = (uint32_t)whorli_action_pattern(flip, low);
+            for (j = directory[c]; j < list_count; j++)
+                if (lists[j].from_class == from && lists[j].pattern == pattern)
+                    break;
+            if (j == list_count) {
+                lists[j].from_class = from;
+                lists[j].pattern = pattern;
+                lists[j].count = 0;
+                list_count++;
+            }
+            lists[j].count++;
+        }
+        for (j = directory[c]; j < list_count; j++) {
+            lists[j].first = at;
+            at += lists[j].count;
+            lists[j].count = 0;
+        }
+        for (i = begin; i < end; i++) {
+            uint64_t low = split->low[i];
+            uint32_t from = split->class_of[low ^ change], pattern = (uint32_t)whorli_action_pattern(flip, low);
+            whorli_split_pair *pair;
+            for (j = directory[c]; lists[j].from_class != from || lists[j].pattern != pattern; j++)
+                continue;
+            pair = pairs + lists[j].first + lists[j].count++;
+            pair->row = (uint16_t)(i - begin);
+            pair->from = (uint16_t)split->rank[low ^ change];
+        }
+    }
+    directory[c] = list_count;
+}
+
+/* What depends on the weighted terms. */
+static void whorli_split_fill_terms(whorl_action *action)
+{
+    whorli_split *split = &action->split;
+    const whorli_action_flip *diagonal = whorli_action_diagonal(action);
+    uint64_t g, low = whorl_bits_low(action->cut);
+    split->fits = diagonal == NULL || diagonal->character_count <= WHORLI_SPLIT_CHARACTERS;
+    split->fits = split->fits && split->longest * (uint64_t)action->width <= 65536;
+    split->first_far = action->flip_count;
+    split->list_count = split->near_values = 0;
+    split->has_odd = 0;
+    for (g = diagonal != NULL ? 1 : 0; g < action->flip_count; g++) {
+        whorli_action_flip *flip = action->flips + g;
+        flip->list = UINT32_MAX;
+        if (flip->rank < 0) {
+            split->fits = 0;
+            return;
+        }
+        if ((flip->x & ~low) == 0) {
+            split->near_values = flip->first_value + (UINT64_C(1) << flip->rank);
+            split->has_odd |= flip->odd != 0;
+            continue;
+        }
+        if (split->first_far > g)
+            split->first_far = g;
+        if ((flip->x & low) != 0 || whorli_split_basis_in(flip, low)) {
+            if (split->list_count == split->list_room) {
+                split->fits = 0;
+                return;
+            }
+            flip->list = (uint32_t)split->list_count++;
+        }
+    }
+    if (split->near_values > 65536)
+        split->fits = 0;
+    if (!split->fits)
+        return;
+    whorli_split_fill_diagonal(action);
+    whorli_split_fill_near(action);
+    for (g = split->first_far; g < action->flip_count; g++)
+        if (action->flips[g].list != UINT32_MAX)
+            whorli_split_fill_list(action, action->flips + g);
+}
+
+/* ---- >>split kernels --------------------------------------------------------------------------------------------- */
+
+/* Eight rows of a class and what acts on them; all lanes interleaved: element i of lane l at 8 i + l. */
+typedef struct whorli_split_rows {
+    uint64_t length; /* of a row, elements */
+    const double *x; /* packed; for odd flips a second copy follows with re and im exchanged */
+    double *y;
+    const double *factors;      /* [values][8] */
+    const uint32_t *near_start; /* [length + 1] */
+    const whorli_split_near *near_flips;
+    const double *diagonal;   /* [length], NULL: none */
+    const uint64_t *signs;    /* [length] */
+    const double *characters; /* [count][sign][8] */
+    uint64_t character_count;
+} whorli_split_rows;
+
+WHORLI_BODY void whorli_split_near_rows(const whorli_split_rows *rows)
+{
+    uint64_t i, j, l;
+    for (i = 0; i < rows->length; i++) {
+        double sum[WHORLI_LANES] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0};
+        if (rows->diagonal != NULL) {
+            double f[WHORLI_LANES];
+            uint64_t signs = rows->signs[i];
+            for (l = 0; l < WHORLI_LANES; l++)
+                f[l] = rows->diagonal[i];
+            for (j = 0; j < rows->character_count; j++, signs >>= 1) {
+                const double *e = rows->characters + (2 * j + (signs & 1)) * WHORLI_LANES;
+                for (l = 0; l < WHORLI_LANES; l++)
+                    f[l] += e[l];
+            }
+            for (l = 0; l < WHORLI_LANES; l++)
+                sum[l] += f[l] * rows->x[i * WHORLI_LANES + l];
+        }
+        for (j = rows->near_start[i]; j < rows->near_start[i + 1]; j++) {
+            const double *x = rows->x + (uint64_t)rows->near_flips[j].to * WHORLI_LANES;
+            const double *f = rows->factors + (uint64_t)rows->near_flips[j].value * WHORLI_LANES;
+            for (l = 0; l < WHORLI_LANES; l++)
+                sum[l] += f[l] * x[l];
+        }
+        for (l = 0; l < WHORLI_LANES; l++)
+            rows->y[i * WHORLI_LANES + l] = sum[l];
+    }
+}
+
+/* y += f[0] x[0] + ... + f[count - 1] x[count - 1], one after the other; count 1 .. 4. */
+WHORLI_BODY void whorli_split_far_rows(double *WHORLI_RESTRICT y, const double *const *x, const double *f,
+                                       int32_t count, uint64_t reals)
+{
+    const double *a = x[0], *b = x[1], *c = x[2], *d = x[3];
+    double p = f[0], q = f[1], r = f[2], s = f[3];
+    uint64_t i;
+    switch (count) {
+    case 1:
+        for (i = 0; i < reals; i++)
+            y[i] += p * a[i];
+        break;
+    case 2:
+        for (i = 0; i < reals; i++)
+            y[i] = (y[i] + p * a[i]) + q * b[i];
+        break;
+    case 3:
+        for (i = 0; i < reals; i++)
+            y[i] = ((y[i] + p * a[i]) + q * b[i]) + r * c[i];
+        break;
+    default:
+        for (i = 0; i < reals; i++)
+            y[i] = (((y[i] + p * a[i]) + q * b[i]) + r * c[i]) + s * d[i];
+    }
+}
+
+typedef void (*whorli_split_near_function)(const whorli_split_rows *rows);
+typedef void (*whorli_split_far_function)(double *y, const double *const *x, const double *f, int32_t count,
+                                          uint64_t reals);
+static void whorli_split_near_plain(const whorli_split_rows *rows)
+{
+    whorli_split_near_rows(rows);
+}
+static void whorli_split_far_plain(double *y, const double *const *x, const double *f, int32_t count, uint64_t reals)
+{
+    whorli_split_far_rows(y, x, f, count, reals);
+}
+#if WHORLI_TARGETS
+WHORLI_TARGET_AVX2 static void whorli_split_near_avx2(const whorli_split_rows *rows)
+{
+    whorli_split_near_rows(rows);
+}
+WHORLI_TARGET_AVX2 static void whorli_split_far_avx2(double *y, const double *const *x, const double *f, int32_t count,
+                                                     uint64_t reals)
+{
+    whorli_split_far_rows(y, x, f, count, reals);
+}
+WHORLI_TARGET_AVX512 static void whorli_split_near_avx512(const whorli_split_rows *rows)
+{
+    whorli_split_near_rows(rows);
+}
+WHORLI_TARGET_AVX512 static void whorli_split_far_avx512(double *y, const double *const *x, const double *f,
+                                                         int32_t count, uint64_t reals)
+{
+    whorli_split_far_rows(y, x, f, count, reals);
+}
+#endif
+
+/* The odd flip of a whole row: re from im, im from re with the sign turned. */
+static void whorli_split_far_odd(double *WHORLI_RESTRICT y, const double *x, double f, uint64_t reals)
+{
+    uint64_t i;
+    for (i = 0; i < reals; i += 2) {
+        y[i] += f * x[i + 1];
+        y[i + 1] += -f * x[i];
+    }
+}
+
+static void whorli_split_far_pairs(double *WHORLI_RESTRICT y, const double *x, double f, const whorli_split_pair *pairs,
+                                   uint64_t count, int32_t width, uint64_t odd)
+{
+    uint64_t i;
+    if (width == 1) {
+        for (i = 0; i < count; i++)
+            y[pairs[i].row] += f * x[pairs[i].from];
+    } else if (odd == 0) {
+        for (i = 0; i < count; i++) {
+            double *to = y + 2 * (uint64_t)pairs[i].row;
+            const double *from = x + 2 * (uint64_t)pairs[i].from;
+            to[0] += f * from[0];
+            to[1] += f * from[1];
+        }
+    } else {
+        for (i = 0; i < count; i++) {
+            double *to = y + 2 * (uint64_t)pairs[i].row;
+            const double *from = x + 2 * (uint64_t)pairs[i].from;
+            to[0] += f * from[1];
+            to[1] += -f * from[0];
+        }
+    }
+}
+
+/* ---- >>split product --------------------------------------------------------------------------------------------- */
+
+/* Of all workers; each has its share of each piece. */
+typedef struct whorli_split_scratch {
+    double *x, *y, *factors, *characters, *rows, *sources;
+    uint64_t x_share, y_share, factor_share, character_share, row_share, source_share;
+} whorli_split_scratch;
+
+typedef struct whorli_split_job {
+    const whorli_action_job *job;
+    whorli_split_scratch scratch;
+    whorli_split_near_function near_rows;
+    whorli_split_far_function far_rows;
+} whorli_split_job;
+
+static void whorli_split_carve_scratch(whorl_layout *layout, const whorl_action *action, int32_t workers,
+                                       whorli_split_scratch *scratch)
+{
+    const whorli_split *split = &action->split;
+    const whorli_action_flip *diagonal = whorli_action_diagonal(action);
+    uint64_t all = (uint64_t)workers, packed = split->longest * WHORLI_LANES;
+    int32_t converts = whorl_element_is_float(action->element);
+    scratch->x_share = packed * (split->has_odd ? 2 : 1);
+    scratch->y_share = packed;
+    scratch->factor_share = (split->near_values + 1) * WHORLI_LANES;
+    scratch->character_share = (diagonal == NULL ? 0 : diagonal->character_count) * 2 * WHORLI_LANES;
+    scratch->row_share = converts ? split->longest * (uint64_t)action->width : 0;
+    scratch->source_share = 4 * scratch->row_share;
+    scratch->x = (double *)whorl_layout_carve(layout, all * scratch->x_share, sizeof(double));
+    scratch->y = (double *)whorl_layout_carve(layout, all * scratch->y_share, sizeof(double));
+    scratch->factors = (double *)whorl_layout_carve(layout, all * scratch->factor_share, sizeof(double));
+    scratch->characters = (double *)whorl_layout_carve(layout, all * scratch->character_share, sizeof(double));
+    scratch->rows = (double *)whorl_layout_carve(layout, all * scratch->row_share, sizeof(double));
+    scratch->sources = (double *)whorl_layout_carve(layout, all * scratch->source_share, sizeof(double));
+}
+
+/* One chunk: up to eight lanes. Slot s (a row of a column) is lane s, or lanes 2 s and 2 s + 1. */
+typedef struct whorli_split_chunk {
+    uint64_t count;  /* slots in use */
+    uint64_t length; /* of a row, elements */
+    uint64_t class_number;
+    uint64_t high[WHORLI_LANES]; /* high part, in its place */
+    uint64_t column[WHORLI_LANES];
+} whorli_split_chunk;
+
+static void whorli_split_pack(const whorli_split_job *job, const whorli_split_chunk *chunk, double *to)
+{
+    const whorl_action *action = job->job->action;
+    const whorli_split *split = &action->split;
+    uint64_t width = (uint64_t)action->width, lanes = WHORLI_LANES, bytes = whorl_element_bytes(action->element), s, i;
+    uint64_t slots = lanes / width;
+    for (s = 0; s < slots; s++) {
+        uint64_t used = s < chunk->count ? s : 0;
+        uint64_t at =
+            chunk->column[used] * job->job->columns_of_x + split->start[chunk->high[used] >> split->low_sites];
+        const char *row = job->job->x + at * bytes;
+        if (whorl_element_is_float(action->element)) {
+            const float *from = (const float *)(const void *)row;
+            for (i = 0; i < chunk->length; i++) {
+                to[i * lanes + s * width] = (double)from[i * width];
+                if (width == 2)
+                    to[i * lanes + 2 * s + 1] = (double)from[2 * i + 1];
+            }
+        } else {
+            const double *from = (const double *)(const void *)row;
+            if (width == 1) {
+                for (i = 0; i < chunk->length; i++)
+                    to[i * lanes + s] = from[i];
+            } else {
+                for (i = 0; i < chunk->length; i++) {
+                    to[i * lanes + 2 * s] = from[2 * i];
+                    to[i * lanes + 2 * s + 1] = from[2 * i + 1];
+                }
+            }
+        }
+    }
+    if (split->has_odd)
+        for (i = 0; i < chunk->length * lanes; i++)
+            to[chunk->length * lanes + i] = to[i ^ 1];
+}
+
+/* Factors of the near flips and of the diagonal's characters for the high parts of the lanes. */
+static void whorli_split_fill_factors(const whorli_split_job *job, const whorli_split_chunk *chunk, double *factors,
+                                      double *characters)
+{
+    const whorl_action *action = job->job->action;
+    const whorli_split *split = &action->split;
+    const whorli_action_flip *diagonal = whorli_action_diagonal(action);
+    uint64_t g, p, l, j, width = (uint64_t)action->width;
+    for (g = diagonal != NULL ? 1 : 0; g < split->first_far; g++) {
+        const whorli_action_flip *flip = action->flips + g;
+        for (l = 0; l < WHORLI_LANES; l++) {
+            uint64_t s = l / width < chunk->count ? l / width : 0, turned = whorli_action_pattern(flip, chunk->high[s]);
+            for (p = 0; p < UINT64_C(1) << flip->rank; p++) {
+                double f = action->values[flip->first_value + (p ^ turned)];
+                factors[(flip->first_value + p) * WHORLI_LANES + l] = flip->odd && (l & 1) != 0 ? -f : f;
+            }
+        }
+    }
+    for (j = 0; diagonal != NULL && j < diagonal->character_count; j++) {
+        const whorli_action_character *character = action->characters + diagonal->first_character + j;
+        for (l = 0; l < WHORLI_LANES; l++) {
+            uint64_t s = l / width < chunk->count ? l / width : 0, i;
+            double e = 0.0;
+            for (i = character->first; i < character->first + character->count; i++)
+                e += whorl_bits_parity(action->terms[i].high & chunk->high[s]) ? -action->terms[i].d
+                                                                               : action->terms[i].d;
+            characters[2 * j * WHORLI_LANES + l] = e;
+            characters[(2 * j + 1) * WHORLI_LANES + l] = -e;
+        }
+    }
+}
+
+/* Far flips of one slot, onto its row of doubles. */
+static void whorli_split_far(const whorli_split_job *job, const whorli_split_chunk *chunk, uint64_t s, double *y,
+                             double *sources)
+{
+    const whorl_action *action = job->job->action;
+    const whorli_split *split = &action->split;
+    uint64_t width = (uint64_t)action->width, bytes = whorl_element_bytes(action->element), g;
+    uint64_t outside = ~whorl_bits_low(action->cut);
+    const double *x[4] = {NULL, NULL, NULL, NULL};
+    double f[4] = {0.0, 0.0, 0.0, 0.0};
+    int32_t waiting = 0;
+    for (g = split->first_far; g < action->flip_count; g++) {
+        const whorli_action_flip *flip = action->flips + g;
+        uint64_t high = chunk->high[s] ^ (flip->x & outside), place = high >> split->low_sites, reals, at;
+        uint32_t need = split->need[place];
+        const double *values = action->values + flip->first_value;
+        uint64_t turned = whorli_action_pattern(flip, chunk->high[s]);
+        double *buffer = sources + (uint64_t)waiting * split->longest * width;
+        if (need == UINT32_MAX || (flip->list == UINT32_MAX && (need != chunk->class_number || values[turned] == 0.0)))
+            continue;
+        reals = width * (split->class_low[need + 1] - split->class_low[need]);
+        at = chunk->column[s] * job->job->columns_of_x + split->start[place];
+        if (flip->list == UINT32_MAX && flip->odd == 0) { /* a whole row: wait for company */
+            x[waiting] = whorli_vector_load(action->element, job->job->x + at * bytes, reals, buffer);
+            f[waiting++] = values[turned];
+            if (waiting == 4) {
+                job->far_rows(y, x, f, 4, reals);
+                waiting = 0;
+            }
+            continue;
+        }
+        if (waiting > 0)
+            job->far_rows(y, x, f, waiting, width * chunk->length);
+        waiting = 0;
+        if (flip->list == UINT32_MAX) {
+            whorli_split_far_odd(y, whorli_vector_load(action->element, job->job->x + at * bytes, reals, sources),
+                                 values[turned], reals);
+        } else {
+            const uint32_t *directory = split->directory + flip->list * (split->classes + 1) + chunk->class_number;
+            const whorli_split_pairs *list = split->lists + flip->list * split->pairs_room;
+            const whorli_split_pairs *end = list + directory[1];
+            const double *from = NULL;
+            for (list += directory[0]; list < end; list++) {
+                double factor = values[list->pattern ^ turned];
+                if (list->from_class != need || factor == 0.0)
+                    continue;
+                if (from == NULL)
+                    from = whorli_vector_load(action->element, job->job->x + at * bytes, reals, sources);
+                whorli_split_far_pairs(y, from, factor, split->pairs + flip->list * split->lows + list->first,
+                                       list->count, action->width, flip->odd);
+            }
+        }
+    }
+    if (waiting > 0)
+        job->far_rows(y, x, f, waiting, width * chunk->length);
+}
+
+static void whorli_split_do_chunk(const whorli_split_job *job, const whorli_split_chunk *chunk, int32_t worker)
+{
+    const whorl_action *action = job->job->action;
+    const whorli_split *split = &action->split;
+    const whorli_split_scratch *scratch = &job->scratch;
+    const whorli_action_flip *diagonal = whorli_action_diagonal(action);
+    uint64_t w = (uint64_t)worker, first = split->class_low[chunk->class_number], s, i, width = (uint64_t)action->width;
+    double *x = scratch->x + w * scratch->x_share, *y = scratch->y + w * scratch->y_share;
+    double *factors = scratch->factors + w * scratch->factor_share;
+    double *characters = scratch->characters + w * scratch->character_share;
+    whorli_split_rows rows;
+    whorli_split_pack(job, chunk, x);
+    whorli_split_fill_factors(job, chunk, factors, characters);
+    rows.length = chunk->length;
+    rows.x = x;
+    rows.y = y;
+    rows.factors = factors;
+    rows.near_start = split->near_start + first;
+    rows.near_flips = split->near_flips;
+    rows.diagonal = diagonal == NULL ? NULL : split->diagonal + first;
+    rows.signs = split->signs + first;
+    rows.characters = characters;
+    rows.character_count = diagonal == NULL ? 0 : diagonal->character_count;
+    job->near_rows(&rows);
+    for (s = 0; s < chunk->count; s++) {
+        uint64_t at = chunk->column[s] * job->job->rows + split->start[chunk->high[s] >> split->low_sites];
+        char *to = job->job->y + at * whorl_element_bytes(action->element);
+        int32_t converts = whorl_element_is_float(action->element);
+        double *row = converts ? scratch->rows + w * scratch->row_share : (double *)(void *)to;
+        if (width == 1)
+            for (i = 0; i < chunk->length; i++)
+                row[i] = y[i * WHORLI_LANES + s];
+        else
+            for (i = 0; i < chunk->length; i++) {
+                row[2 * i] = y[i * WHORLI_LANES + 2 * s];
+                row[2 * i + 1] = y[i * WHORLI_LANES + 2 * s + 1];
+            }
+        whorli_split_far(job, chunk, s, row, scratch->sources + w * scratch->source_share);
+        if (converts)
+            whorli_vector_store(action->element, row, width * chunk->length, to);
+    }
+}
+
+static void whorli_split_body(void *argument, uint64_t block, int32_t worker)
+{
+    const whorli_split_job *job = (const whorli_split_job *)argument;
+    const whorli_split *split = &job->job->action->split;
+    uint64_t c = split->group_class[block], first = split->group_first[block], left = split->class_row[c + 1] - first;
+    uint64_t rows = left < split->group_rows ? left : split->group_rows, columns = (uint64_t)job->job->count, q;
+    whorli_split_chunk chunk;
+    chunk.class_number = c;
+    chunk.length = split->class_low[c + 1] - split->class_low[c];
+    chunk.count = 0;
+    for (q = 0; q < rows * columns; q++) { /* columns of a partly filled group share the lanes */
+        chunk.high[chunk.count] = (uint64_t)split->order[first + q % rows] << split->low_sites;
+        chunk.column[chunk.count++] = q / rows;
+        if (chunk.count == split->group_rows || q + 1 == rows * columns) {
+            whorli_split_do_chunk(job, &chunk, worker);
+            chunk.count = 0;
+        }
+    }
+}
+
+static whorl_status whorli_split_apply(whorl_host *host, const whorli_action_job *given)
+{
+    const whorl_action *action = given->action;
+    whorl_layout layout = {NULL, 0};
+    whorl_block block;
+    whorl_status status;
+    whorli_split_job job;
+    int32_t workers = whorl_workers(host);
+    uint64_t updates = action->split.longest * WHORLI_LANES * (action->flip_count + 1);
+    if (given->rows == 0)
+        return WHORL_OK;
+    whorli_split_carve_scratch(&layout, action, workers, &job.scratch);
+    status = whorl_layout_take(host, &layout, &block);
+    if (status != WHORL_OK)
+        return status;
+    whorli_split_carve_scratch(&layout, action, workers, &job.scratch);
+    job.job = given;
+    job.near_rows = whorli_split_near_plain;
+    job.far_rows = whorli_split_far_plain;
+#if WHORLI_TARGETS
+    if (whorli_target() == 2) {
+        job.near_rows = whorli_split_near_avx512;
+        job.far_rows = whorli_split_far_avx512;
+    } else if (whorli_target() == 1) {
+        job.near_rows = whorli_split_near_avx2;
+        job.far_rows = whorli_split_far_avx2;
+    }
+#endif
+    status = whorl_run(host, whorli_split_body, &job, action->split.group_count,
+                       whorl_size_multiply(updates, (uint64_t)given->count));
+    whorl_block_give(host, &block);
+    return status;
+}
+
 /* ---- >>map ------------------------------------------------------------------------------------------------------- */
 
 static whorl_status whorli_action_apply(whorl_host *host, const whorl_map *map, const void *x, void *y, int32_t count)
@@ -830,9 +1709,23 @@ static whorl_status whorli_action_apply(whorl_host *host, const whorl_map *map, 
     job.columns_of_x = map->columns;
     job.rows = map->rows;
     job.count = count;
+    if (action->split.used && action->split.fits)
+        return whorli_split_apply(host, &job);
     job.block = 1024;
     return whorl_run(host, whorli_any_body, &job, (job.rows + (job.block - 1)) / job.block,
                      whorl_size_multiply(job.block * (action->flip_count + 1), (uint64_t)count));
+}
+
+static uint64_t whorli_action_scratch(const whorl_host *host, const whorl_map *map, int32_t count)
+{
+    const whorl_action *action = (const whorl_action *)map->context;
+    whorl_layout layout = {NULL, 0};
+    whorli_split_scratch scratch;
+    (void)count;
+    if (!action->split.used || !action->split.fits || map->rows == 0)
+        return 0;
+    whorli_split_carve_scratch(&layout, action, whorl_workers(host), &scratch);
+    return whorl_block_bytes(layout.bytes);
 }
 
 whorl_map whorl_action_map(const whorl_action *action)
@@ -845,13 +1738,13 @@ whorl_map whorl_action_map(const whorl_action *action)
     map.norm_bound = action->norm_bound;
     map.context = action;
     map.apply = whorli_action_apply;
+    map.scratch = whorli_action_scratch;
     return map;
 }
 
 const char *whorl_action_kernel(const whorl_action *action)
 {
-    (void)action;
-    return "state by state";
+    return action->split.used && action->split.fits ? "rows of eight" : "state by state";
 }
 
 WHORLI_ARITHMETIC_END
