@@ -6,5 +6,6 @@
 #include "whorl_dense.h"
 #include "whorl_lattice.h"
 #include "whorl_text.h"
+#include "whorl_lanczos.h"
 #include "whorl_action.h"
 #include "whorl_model.h"
