@@ -695,6 +695,12 @@ static void test_bad_input(void)
     check_refused(&desc, WHORL_BAD_ARGUMENT, WHORL_NONE, "states is NULL");
     desc.states = states;
     check_refused(&desc, WHORL_BAD_ARGUMENT, 3, "repeats the state 3");
+    states[3] = 1; /* the smallest twice, and in an ascending list */
+    check_refused(&desc, WHORL_BAD_ARGUMENT, 3, "repeats the state 1");
+    states[0] = states[1] = 0;
+    desc.state_count = 2;
+    check_refused(&desc, WHORL_BAD_ARGUMENT, 1, "repeats the state 0");
+    desc.state_count = 4;
     states[3] = 16;
     check_refused(&desc, WHORL_BAD_ARGUMENT, 3, "beyond the last");
 }
