@@ -9,3 +9,4 @@
 #include "whorl_lanczos.h"
 #include "whorl_action.h"
 #include "whorl_model.h"
+#include "whorl_levels.h"
