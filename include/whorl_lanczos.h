@@ -49,7 +49,7 @@ enum { WHORL_LOWEST = 0, WHORL_HIGHEST = 1 };
 
 #define WHORL_LANCZOS_WANTED 4
 #define WHORL_LANCZOS_TOLERANCE 1e-10
-#define WHORL_LANCZOS_LEAST_TOLERANCE 1e-14      /* of double elements; smaller ones count as this */
+#define WHORL_LANCZOS_LEAST_TOLERANCE 1e-13      /* of double elements; smaller ones count as this */
 #define WHORL_LANCZOS_LEAST_TOLERANCE_FLOAT 4e-6 /* of float elements */
 #define WHORL_LANCZOS_MOST_PRODUCTS 100000
 #define WHORL_LANCZOS_MOST_WANTED 1000
@@ -90,7 +90,7 @@ WHORL_API whorl_status whorl_lanczos_make(whorl_host *host, const whorl_map *map
  * Goes on for about `products` products (0: to the end). Cost of one: the product, and 2 n (window + wanted) multiplications
  * for orthogonality. Returns WHORL_OK when done, WHORL_UNFINISHED when the budget is used up, WHORL_NOT_CONVERGED when
  * most_products is reached (what was accepted is there). Errors: WHORL_BAD_ARGUMENT (another map than that of make),
- * WHORL_NOT_FINITE (a product gave NaN or infinity), WHORL_CANCELLED (call again: the same bits), those of the map, those of
+ * WHORL_NOT_FINITE (a product gave NaN, infinity, or numbers beyond 1e150, whose squares overflow), WHORL_CANCELLED (call again: the same bits), those of the map, those of
  * memory.
  */
 WHORL_API whorl_status whorl_lanczos_advance(whorl_host *host, const whorl_map *map, whorl_lanczos *solver,
@@ -231,10 +231,9 @@ static void whorli_lanczos_carve(whorl_layout *layout, const whorli_lanczos_stat
 /* What one call inside advance takes beside the solver. */
 static uint64_t whorli_lanczos_scratch(const whorl_host *host, const whorl_map *map, const whorli_lanczos_state *plan)
 {
-    uint64_t product = whorl_map_scratch(host, map, 1), step = whorl_map_scratch(host, map, 0);
+    /* a step that overwrites its target is an apply where the map has none of its own */
+    uint64_t product = whorl_map_scratch(host, map, plan->lean || map->step != NULL ? 0 : 1);
     uint64_t dense = plan->lean ? 0 : whorl_dense_symmetric_bytes((uint64_t)plan->window, 1);
-    if (step > product)
-        product = step;
     return dense > product ? dense : product;
 }
 
