@@ -178,6 +178,7 @@ typedef struct whorli_split_pair {
 typedef struct whorli_split_pairs {
     uint32_t first, count; /* of the pairs */
     uint32_t from_class, pattern;
+    uint32_t runs; /* 0: pairs; otherwise so many runs of them, two entries each: the first pair, and the length - 1 */
 } whorli_split_pairs;
 
 typedef struct whorli_split {
@@ -187,7 +188,8 @@ typedef struct whorli_split {
     uint64_t lows, highs; /* 2^low_sites, 2^high_sites */
     uint64_t classes, longest;
     uint64_t group_rows, group_room, group_count;
-    uint64_t near_room, list_room, pairs_room; /* entries; flips with lists; directory entries a flip */
+    uint64_t near_room, list_room;  /* entries; flips with lists */
+    uint64_t pairs_room, pair_room; /* lists and entries of a flip with lists */
     uint64_t list_count, most_values;
     uint64_t near_values; /* values of near flips come first */
     int32_t has_odd;
@@ -207,7 +209,7 @@ typedef struct whorli_split {
     whorli_split_near *near_flips; /* [near_room] */
     uint32_t *directory;           /* [list_room * (classes + 1)]: where each class starts in `lists` */
     whorli_split_pairs *lists;     /* [list_room * pairs_room] */
-    whorli_split_pair *pairs;      /* [list_room * lows] */
+    whorli_split_pair *pairs;      /* [list_room * pair_room] */
 } whorli_split;
 
 struct whorl_action {
@@ -1045,6 +1047,7 @@ static void whorli_split_plan(const whorl_action_desc *desc, whorl_action *plan)
     split->group_room = split->highs / split->group_rows + split->classes + 1;
     split->pairs_room = 16 * ((uint64_t)split->low_sites + 1) * split->classes;
     split->pairs_room = split->pairs_room < split->lows ? split->pairs_room : split->lows;
+    split->pair_room = split->lows + split->lows / 4; /* runs of pairs are at most an eighth, two entries each */
     for (k = 0; k < desc->sum_count; k++)
         for (i = 0; i < desc->sums[k].count;) {
             const whorl_term *terms = desc->sums[k].terms;
@@ -1058,10 +1061,11 @@ static void whorli_split_plan(const whorl_action_desc *desc, whorl_action *plan)
             else if (((x | z) & low) != 0)
                 split->list_room += width;
         }
-    bytes = 4 * split->near_room + split->list_room * (4 * split->lows + 16 * split->pairs_room + 4 * split->classes);
+    bytes =
+        4 * split->near_room + split->list_room * (4 * split->pair_room + 20 * split->pairs_room + 4 * split->classes);
     split->used =
         bytes <= WHORLI_SPLIT_ROOM + 2 * whorl_space_count(plan->source) * whorl_element_bytes(plan->element) &&
-        split->near_room < UINT32_MAX && split->list_room * split->lows < UINT32_MAX;
+        split->near_room < UINT32_MAX && split->list_room * split->pair_room < UINT32_MAX;
 }
 
 static void whorli_split_carve(whorl_layout *layout, whorl_action *plan)
@@ -1088,7 +1092,8 @@ static void whorli_split_carve(whorl_layout *layout, whorl_action *plan)
         (uint32_t *)whorl_layout_carve(layout, split->list_room * (classes + 1), sizeof *split->directory);
     split->lists =
         (whorli_split_pairs *)whorl_layout_carve(layout, split->list_room * split->pairs_room, sizeof *split->lists);
-    split->pairs = (whorli_split_pair *)whorl_layout_carve(layout, split->list_room * lows, sizeof *split->pairs);
+    split->pairs =
+        (whorli_split_pair *)whorl_layout_carve(layout, split->list_room * split->pair_room, sizeof *split->pairs);
 }
 
 /* Counting sort: `of` gives the class of each of n things; first[c] becomes where class c starts in `sorted`. */
@@ -1201,6 +1206,30 @@ static void whorli_split_fill_near(whorl_action *action)
     split->near_start[i] = (uint32_t)used;
 }
 
+/* Where the pairs of a list are consecutive in long runs, writes the runs to `free` on; returns the entries written. */
+static uint32_t whorli_split_find_runs(whorli_split_pairs *list, whorli_split_pair *pairs, uint32_t free_at)
+{
+    const whorli_split_pair *at = pairs + list->first;
+    whorli_split_pair *to = pairs + free_at;
+    uint32_t i, runs = 0;
+    for (i = 0; i < list->count; i++)
+        runs += i == 0 || at[i].row != at[i - 1].row + 1 || at[i].from != at[i - 1].from + 1;
+    list->runs = 8 * runs <= list->count ? runs : 0;
+    if (list->runs == 0)
+        return 0;
+    for (i = 0; i < list->count; i++) {
+        if (i == 0 || at[i].row != at[i - 1].row + 1 || at[i].from != at[i - 1].from + 1) {
+            *to++ = at[i];
+            to->row = to->from = 0;
+            to++;
+        } else {
+            to[-1].row++;
+        }
+    }
+    list->first = free_at;
+    return 2 * runs;
+}
+
 /*
  * The pairs of a far flip: for each class, lists of equal class on the other side and equal pattern of the low part, in
  * order of the low parts.
@@ -1211,7 +1240,7 @@ static void whorli_split_fill_list(whorl_action *action, const whorli_action_fli
     uint64_t change = flip->x & whorl_bits_low(action->cut), c, i, j;
     uint32_t *directory = split->directory + flip->list * (split->classes + 1);
     whorli_split_pairs *lists = split->lists + flip->list * split->pairs_room;
-    whorli_split_pair *pairs = split->pairs + flip->list * split->lows;
+    whorli_split_pair *pairs = split->pairs + flip->list * split->pair_room;
     uint32_t list_count = 0, at = 0;
     for (c = 0; c < split->classes; c++) {
         uint64_t begin = split->class_low[c], end = split->class_low[c + 1];
@@ -1247,6 +1276,8 @@ static void whorli_split_fill_list(whorl_action *action, const whorli_action_fli
         }
     }
     directory[c] = list_count;
+    for (j = 0; j < list_count; j++)
+        at += whorli_split_find_runs(lists + j, pairs, at);
 }
 
 /* What depends on the weighted terms. */
@@ -1295,13 +1326,16 @@ static void whorli_split_fill_terms(whorl_action *action)
 
 /* ---- >>split kernels --------------------------------------------------------------------------------------------- */
 
-/* Eight rows of a class and what acts on them; all lanes interleaved: element i of lane l at 8 i + l. */
+/* Eight rows of a class and what acts on them; x has the lanes interleaved: element i of lane l at 8 i + l. */
 typedef struct whorli_split_rows {
-    uint64_t length; /* of a row, elements */
-    const double *x; /* packed; for odd flips a second copy follows with re and im exchanged */
-    double *y;
-    const double *factors;      /* [values][8] */
-    const uint32_t *near_start; /* [length + 1] */
+    uint64_t length;                  /* of a row, elements */
+    uint64_t width;                   /* lanes a row */
+    uint64_t count;                   /* rows in use; the other lanes repeat the first */
+    const double *from[WHORLI_LANES]; /* the rows of x, where they are doubles */
+    double *to[WHORLI_LANES];         /* and of y */
+    double *x;                        /* packed; for odd flips a second copy follows with re and im exchanged */
+    const double *factors;            /* [values][8] */
+    const uint32_t *near_start;       /* [length + 1] */
     const whorli_split_near *near_flips;
     const double *diagonal;   /* [length], NULL: none */
     const uint64_t *signs;    /* [length] */
@@ -1309,32 +1343,146 @@ typedef struct whorli_split_rows {
     uint64_t character_count;
 } whorli_split_rows;
 
-WHORLI_BODY void whorli_split_near_rows(const whorli_split_rows *rows)
+/* to[c][r] = from[r][c], eight by eight. */
+WHORLI_BODY void whorli_transpose_plain(const double *const *from, double *const *to)
 {
-    uint64_t i, j, l;
-    for (i = 0; i < rows->length; i++) {
-        double sum[WHORLI_LANES] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0};
-        if (rows->diagonal != NULL) {
-            double f[WHORLI_LANES];
-            uint64_t signs = rows->signs[i];
-            for (l = 0; l < WHORLI_LANES; l++)
-                f[l] = rows->diagonal[i];
-            for (j = 0; j < rows->character_count; j++, signs >>= 1) {
-                const double *e = rows->characters + (2 * j + (signs & 1)) * WHORLI_LANES;
-                for (l = 0; l < WHORLI_LANES; l++)
-                    f[l] += e[l];
+    uint64_t r, c;
+    for (r = 0; r < WHORLI_LANES; r++)
+        for (c = 0; c < WHORLI_LANES; c++)
+            to[c][r] = from[r][c];
+}
+
+#if WHORLI_TARGETS && defined(__has_builtin)
+#if __has_builtin(__builtin_shufflevector)
+#define WHORLI_SHUFFLES 1
+#endif
+#endif
+#ifndef WHORLI_SHUFFLES
+#define WHORLI_SHUFFLES 0
+#endif
+
+#if WHORLI_SHUFFLES
+typedef double whorli_double4 __attribute__((vector_size(32)));
+typedef double whorli_double8 __attribute__((vector_size(64)));
+
+WHORLI_TARGET_AVX512 static inline __attribute__((always_inline)) void
+whorli_transpose_avx512(const double *const *from, double *const *to)
+{
+    whorli_double8 a[8], b[8];
+    int32_t i;
+    for (i = 0; i < 8; i++)
+        memcpy(&a[i], from[i], sizeof a[i]);
+    for (i = 0; i < 8; i += 2) {
+        b[i] = __builtin_shufflevector(a[i], a[i + 1], 0, 8, 2, 10, 4, 12, 6, 14);
+        b[i + 1] = __builtin_shufflevector(a[i], a[i + 1], 1, 9, 3, 11, 5, 13, 7, 15);
+    }
+    for (i = 0; i < 8; i++) {
+        int32_t j = (i & 4) + (i & 1);
+        a[i] = (i & 2) == 0 ? __builtin_shufflevector(b[j], b[j + 2], 0, 1, 8, 9, 4, 5, 12, 13)
+                            : __builtin_shufflevector(b[j], b[j + 2], 2, 3, 10, 11, 6, 7, 14, 15);
+    }
+    for (i = 0; i < 4; i++) {
+        b[i] = __builtin_shufflevector(a[i], a[i + 4], 0, 1, 2, 3, 8, 9, 10, 11);
+        b[i + 4] = __builtin_shufflevector(a[i], a[i + 4], 4, 5, 6, 7, 12, 13, 14, 15);
+    }
+    for (i = 0; i < 8; i++)
+        memcpy(to[i], &b[i], sizeof b[i]);
+}
+
+WHORLI_TARGET_AVX2 static inline __attribute__((always_inline)) void whorli_transpose_avx2(const double *const *from,
+                                                                                           double *const *to)
+{
+    int32_t r, c, i;
+    for (r = 0; r < 8; r += 4)
+        for (c = 0; c < 8; c += 4) {
+            whorli_double4 a[4], b[4];
+            for (i = 0; i < 4; i++)
+                memcpy(&a[i], from[r + i] + c, sizeof a[i]);
+            for (i = 0; i < 4; i += 2) {
+                b[i] = __builtin_shufflevector(a[i], a[i + 1], 0, 4, 2, 6);
+                b[i + 1] = __builtin_shufflevector(a[i], a[i + 1], 1, 5, 3, 7);
             }
-            for (l = 0; l < WHORLI_LANES; l++)
-                sum[l] += f[l] * rows->x[i * WHORLI_LANES + l];
+            for (i = 0; i < 2; i++) {
+                a[i] = __builtin_shufflevector(b[i], b[i + 2], 0, 1, 4, 5);
+                a[i + 2] = __builtin_shufflevector(b[i], b[i + 2], 2, 3, 6, 7);
+            }
+            for (i = 0; i < 4; i++)
+                memcpy(to[c + i] + r, &a[i], sizeof a[i]);
         }
-        for (j = rows->near_start[i]; j < rows->near_start[i + 1]; j++) {
-            const double *x = rows->x + (uint64_t)rows->near_flips[j].to * WHORLI_LANES;
-            const double *f = rows->factors + (uint64_t)rows->near_flips[j].value * WHORLI_LANES;
+}
+#endif
+
+typedef void (*whorli_transpose_function)(const double *const *from, double *const *to);
+
+/* Rows to lanes, eight elements at a time. */
+WHORLI_BODY void whorli_split_pack_rows(const whorli_split_rows *rows, whorli_transpose_function transpose)
+{
+    uint64_t i = 0, s, k;
+    for (; rows->width == 1 && i + WHORLI_LANES <= rows->length; i += WHORLI_LANES) {
+        const double *from[WHORLI_LANES];
+        double *to[WHORLI_LANES];
+        for (s = 0; s < WHORLI_LANES; s++) {
+            from[s] = rows->from[s] + i;
+            to[s] = rows->x + (i + s) * WHORLI_LANES;
+        }
+        transpose(from, to);
+    }
+    for (; i < rows->length; i++)
+        for (s = 0; s < WHORLI_LANES / rows->width; s++)
+            for (k = 0; k < rows->width; k++)
+                rows->x[i * WHORLI_LANES + s * rows->width + k] = rows->from[s][i * rows->width + k];
+}
+
+WHORLI_BODY void whorli_split_near_element(const whorli_split_rows *rows, uint64_t i, double *WHORLI_RESTRICT y)
+{
+    double sum[WHORLI_LANES] = {0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0, 0.0};
+    uint64_t j, l;
+    if (rows->diagonal != NULL) {
+        double f[WHORLI_LANES];
+        uint64_t signs = rows->signs[i];
+        for (l = 0; l < WHORLI_LANES; l++)
+            f[l] = rows->diagonal[i];
+        for (j = 0; j < rows->character_count; j++, signs >>= 1) {
+            const double *e = rows->characters + (2 * j + (signs & 1)) * WHORLI_LANES;
             for (l = 0; l < WHORLI_LANES; l++)
-                sum[l] += f[l] * x[l];
+                f[l] += e[l];
         }
         for (l = 0; l < WHORLI_LANES; l++)
-            rows->y[i * WHORLI_LANES + l] = sum[l];
+            sum[l] += f[l] * rows->x[i * WHORLI_LANES + l];
+    }
+    for (j = rows->near_start[i]; j < rows->near_start[i + 1]; j++) {
+        const double *x = rows->x + (uint64_t)rows->near_flips[j].to * WHORLI_LANES;
+        const double *f = rows->factors + (uint64_t)rows->near_flips[j].value * WHORLI_LANES;
+        for (l = 0; l < WHORLI_LANES; l++)
+            sum[l] += f[l] * x[l];
+    }
+    for (l = 0; l < WHORLI_LANES; l++)
+        y[l] = sum[l];
+}
+
+/* Eight elements of eight lanes, then from lanes to rows. */
+WHORLI_BODY void whorli_split_near_rows(const whorli_split_rows *rows, whorli_transpose_function transpose)
+{
+    double block[WHORLI_LANES * WHORLI_LANES];
+    uint64_t i, s, k, e;
+    for (i = 0; i < rows->length; i += WHORLI_LANES) {
+        uint64_t count = rows->length - i < WHORLI_LANES ? rows->length - i : WHORLI_LANES;
+        for (e = 0; e < count; e++)
+            whorli_split_near_element(rows, i + e, block + e * WHORLI_LANES);
+        if (rows->width == 1 && rows->count == WHORLI_LANES && count == WHORLI_LANES) {
+            const double *from[WHORLI_LANES];
+            double *to[WHORLI_LANES];
+            for (s = 0; s < WHORLI_LANES; s++) {
+                from[s] = block + s * WHORLI_LANES;
+                to[s] = rows->to[s] + i;
+            }
+            transpose(from, to);
+        } else {
+            for (e = 0; e < count; e++)
+                for (s = 0; s < rows->count; s++)
+                    for (k = 0; k < rows->width; k++)
+                        rows->to[s][(i + e) * rows->width + k] = block[e * WHORLI_LANES + s * rows->width + k];
+        }
     }
 }
 
@@ -1342,8 +1490,8 @@ WHORLI_BODY void whorli_split_near_rows(const whorli_split_rows *rows)
 WHORLI_BODY void whorli_split_far_rows(double *WHORLI_RESTRICT y, const double *const *x, const double *f,
                                        int32_t count, uint64_t reals)
 {
-    const double *a = x[0], *b = x[1], *c = x[2], *d = x[3];
-    double p = f[0], q = f[1], r = f[2], s = f[3];
+    const double *a = x[0], *b = x[count > 1 ? 1 : 0], *c = x[count > 2 ? 2 : 0], *d = x[count > 3 ? 3 : 0];
+    double p = f[0], q = f[count > 1 ? 1 : 0], r = f[count > 2 ? 2 : 0], s = f[count > 3 ? 3 : 0];
     uint64_t i;
     switch (count) {
     case 1:
@@ -1364,30 +1512,46 @@ WHORLI_BODY void whorli_split_far_rows(double *WHORLI_RESTRICT y, const double *
     }
 }
 
-typedef void (*whorli_split_near_function)(const whorli_split_rows *rows);
+typedef void (*whorli_split_rows_function)(const whorli_split_rows *rows);
 typedef void (*whorli_split_far_function)(double *y, const double *const *x, const double *f, int32_t count,
                                           uint64_t reals);
+static void whorli_split_pack_plain(const whorli_split_rows *rows)
+{
+    whorli_split_pack_rows(rows, whorli_transpose_plain);
+}
 static void whorli_split_near_plain(const whorli_split_rows *rows)
 {
-    whorli_split_near_rows(rows);
+    whorli_split_near_rows(rows, whorli_transpose_plain);
 }
 static void whorli_split_far_plain(double *y, const double *const *x, const double *f, int32_t count, uint64_t reals)
 {
     whorli_split_far_rows(y, x, f, count, reals);
 }
 #if WHORLI_TARGETS
+#if !WHORLI_SHUFFLES
+#define whorli_transpose_avx2 whorli_transpose_plain
+#define whorli_transpose_avx512 whorli_transpose_plain
+#endif
+WHORLI_TARGET_AVX2 static void whorli_split_pack_avx2(const whorli_split_rows *rows)
+{
+    whorli_split_pack_rows(rows, whorli_transpose_avx2);
+}
 WHORLI_TARGET_AVX2 static void whorli_split_near_avx2(const whorli_split_rows *rows)
 {
-    whorli_split_near_rows(rows);
+    whorli_split_near_rows(rows, whorli_transpose_avx2);
 }
 WHORLI_TARGET_AVX2 static void whorli_split_far_avx2(double *y, const double *const *x, const double *f, int32_t count,
                                                      uint64_t reals)
 {
     whorli_split_far_rows(y, x, f, count, reals);
 }
+WHORLI_TARGET_AVX512 static void whorli_split_pack_avx512(const whorli_split_rows *rows)
+{
+    whorli_split_pack_rows(rows, whorli_transpose_avx512);
+}
 WHORLI_TARGET_AVX512 static void whorli_split_near_avx512(const whorli_split_rows *rows)
 {
-    whorli_split_near_rows(rows);
+    whorli_split_near_rows(rows, whorli_transpose_avx512);
 }
 WHORLI_TARGET_AVX512 static void whorli_split_far_avx512(double *y, const double *const *x, const double *f,
                                                          int32_t count, uint64_t reals)
@@ -1434,14 +1598,14 @@ static void whorli_split_far_pairs(double *WHORLI_RESTRICT y, const double *x, d
 
 /* Of all workers; each has its share of each piece. */
 typedef struct whorli_split_scratch {
-    double *x, *y, *factors, *characters, *rows, *sources;
-    uint64_t x_share, y_share, factor_share, character_share, row_share, source_share;
+    double *x, *factors, *characters, *rows, *sources;
+    uint64_t x_share, factor_share, character_share, row_share, source_share;
 } whorli_split_scratch;
 
 typedef struct whorli_split_job {
     const whorli_action_job *job;
     whorli_split_scratch scratch;
-    whorli_split_near_function near_rows;
+    whorli_split_rows_function pack_rows, near_rows;
     whorli_split_far_function far_rows;
 } whorli_split_job;
 
@@ -1453,13 +1617,11 @@ static void whorli_split_carve_scratch(whorl_layout *layout, const whorl_action 
     uint64_t all = (uint64_t)workers, packed = split->longest * WHORLI_LANES;
     int32_t converts = whorl_element_is_float(action->element);
     scratch->x_share = packed * (split->has_odd ? 2 : 1);
-    scratch->y_share = packed;
     scratch->factor_share = (split->near_values + 1) * WHORLI_LANES;
     scratch->character_share = (diagonal == NULL ? 0 : diagonal->character_count) * 2 * WHORLI_LANES;
-    scratch->row_share = converts ? split->longest * (uint64_t)action->width : 0;
-    scratch->source_share = 4 * scratch->row_share;
+    scratch->row_share = converts ? packed : 0;
+    scratch->source_share = converts ? 4 * split->longest * (uint64_t)action->width : 0;
     scratch->x = (double *)whorl_layout_carve(layout, all * scratch->x_share, sizeof(double));
-    scratch->y = (double *)whorl_layout_carve(layout, all * scratch->y_share, sizeof(double));
     scratch->factors = (double *)whorl_layout_carve(layout, all * scratch->factor_share, sizeof(double));
     scratch->characters = (double *)whorl_layout_carve(layout, all * scratch->character_share, sizeof(double));
     scratch->rows = (double *)whorl_layout_carve(layout, all * scratch->row_share, sizeof(double));
@@ -1475,40 +1637,29 @@ typedef struct whorli_split_chunk {
     uint64_t column[WHORLI_LANES];
 } whorli_split_chunk;
 
-static void whorli_split_pack(const whorli_split_job *job, const whorli_split_chunk *chunk, double *to)
+/* The rows of x and y as doubles: where they are, or in scratch. */
+static void whorli_split_place(const whorli_split_job *job, const whorli_split_chunk *chunk, int32_t worker,
+                               whorli_split_rows *rows)
 {
     const whorl_action *action = job->job->action;
     const whorli_split *split = &action->split;
-    uint64_t width = (uint64_t)action->width, lanes = WHORLI_LANES, bytes = whorl_element_bytes(action->element), s, i;
-    uint64_t slots = lanes / width;
-    for (s = 0; s < slots; s++) {
-        uint64_t used = s < chunk->count ? s : 0;
-        uint64_t at =
-            chunk->column[used] * job->job->columns_of_x + split->start[chunk->high[used] >> split->low_sites];
-        const char *row = job->job->x + at * bytes;
+    uint64_t width = (uint64_t)action->width, bytes = whorl_element_bytes(action->element), s;
+    double *spare = job->scratch.rows + (uint64_t)worker * job->scratch.row_share;
+    rows->length = chunk->length;
+    rows->width = width;
+    rows->count = chunk->count;
+    for (s = 0; s < WHORLI_LANES / width; s++) {
+        uint64_t used = s < chunk->count ? s : 0, start = split->start[chunk->high[used] >> split->low_sites];
+        const char *x = job->job->x + (chunk->column[used] * job->job->columns_of_x + start) * bytes;
+        char *y = job->job->y + (chunk->column[used] * job->job->rows + start) * bytes;
         if (whorl_element_is_float(action->element)) {
-            const float *from = (const float *)(const void *)row;
-            for (i = 0; i < chunk->length; i++) {
-                to[i * lanes + s * width] = (double)from[i * width];
-                if (width == 2)
-                    to[i * lanes + 2 * s + 1] = (double)from[2 * i + 1];
-            }
+            rows->to[s] = spare + s * chunk->length * width;
+            rows->from[s] = whorli_vector_load(action->element, x, chunk->length * width, rows->to[s]);
         } else {
-            const double *from = (const double *)(const void *)row;
-            if (width == 1) {
-                for (i = 0; i < chunk->length; i++)
-                    to[i * lanes + s] = from[i];
-            } else {
-                for (i = 0; i < chunk->length; i++) {
-                    to[i * lanes + 2 * s] = from[2 * i];
-                    to[i * lanes + 2 * s + 1] = from[2 * i + 1];
-                }
-            }
+            rows->from[s] = (const double *)(const void *)x;
+            rows->to[s] = (double *)(void *)y;
         }
     }
-    if (split->has_odd)
-        for (i = 0; i < chunk->length * lanes; i++)
-            to[chunk->length * lanes + i] = to[i ^ 1];
 }
 
 /* Factors of the near flips and of the diagonal's characters for the high parts of the lanes. */
@@ -1540,6 +1691,24 @@ static void whorli_split_fill_factors(const whorli_split_job *job, const whorli_
             characters[2 * j * WHORLI_LANES + l] = e;
             characters[(2 * j + 1) * WHORLI_LANES + l] = -e;
         }
+    }
+}
+
+static void whorli_split_far_list(const whorli_split_job *job, double *y, const double *x, double f,
+                                  const whorli_split_pairs *list, const whorli_split_pair *pairs, uint64_t odd)
+{
+    int32_t width = job->job->action->width;
+    uint32_t i;
+    if (list->runs == 0)
+        whorli_split_far_pairs(y, x, f, pairs, list->count, width, odd);
+    for (i = 0; i < list->runs; i++) {
+        double *to = y + (uint64_t)width * pairs[2 * i].row;
+        const double *from = x + (uint64_t)width * pairs[2 * i].from;
+        uint64_t reals = (uint64_t)width * (UINT64_C(1) + pairs[2 * i + 1].row);
+        if (odd)
+            whorli_split_far_odd(to, from, f, reals);
+        else
+            job->far_rows(to, &from, &f, 1, reals);
     }
 }
 
@@ -1591,8 +1760,8 @@ static void whorli_split_far(const whorli_split_job *job, const whorli_split_chu
                     continue;
                 if (from == NULL)
                     from = whorli_vector_load(action->element, job->job->x + at * bytes, reals, sources);
-                whorli_split_far_pairs(y, from, factor, split->pairs + flip->list * split->lows + list->first,
-                                       list->count, action->width, flip->odd);
+                whorli_split_far_list(job, y, from, factor, list,
+                                      split->pairs + flip->list * split->pair_room + list->first, flip->odd);
             }
         }
     }
@@ -1606,16 +1775,17 @@ static void whorli_split_do_chunk(const whorli_split_job *job, const whorli_spli
     const whorli_split *split = &action->split;
     const whorli_split_scratch *scratch = &job->scratch;
     const whorli_action_flip *diagonal = whorli_action_diagonal(action);
-    uint64_t w = (uint64_t)worker, first = split->class_low[chunk->class_number], s, i, width = (uint64_t)action->width;
-    double *x = scratch->x + w * scratch->x_share, *y = scratch->y + w * scratch->y_share;
+    uint64_t w = (uint64_t)worker, first = split->class_low[chunk->class_number], s, i;
     double *factors = scratch->factors + w * scratch->factor_share;
     double *characters = scratch->characters + w * scratch->character_share;
     whorli_split_rows rows;
-    whorli_split_pack(job, chunk, x);
+    whorli_split_place(job, chunk, worker, &rows);
+    rows.x = scratch->x + w * scratch->x_share;
+    job->pack_rows(&rows);
+    if (split->has_odd)
+        for (i = 0; i < chunk->length * WHORLI_LANES; i++)
+            rows.x[chunk->length * WHORLI_LANES + i] = rows.x[i ^ 1];
     whorli_split_fill_factors(job, chunk, factors, characters);
-    rows.length = chunk->length;
-    rows.x = x;
-    rows.y = y;
     rows.factors = factors;
     rows.near_start = split->near_start + first;
     rows.near_flips = split->near_flips;
@@ -1626,20 +1796,10 @@ static void whorli_split_do_chunk(const whorli_split_job *job, const whorli_spli
     job->near_rows(&rows);
     for (s = 0; s < chunk->count; s++) {
         uint64_t at = chunk->column[s] * job->job->rows + split->start[chunk->high[s] >> split->low_sites];
-        char *to = job->job->y + at * whorl_element_bytes(action->element);
-        int32_t converts = whorl_element_is_float(action->element);
-        double *row = converts ? scratch->rows + w * scratch->row_share : (double *)(void *)to;
-        if (width == 1)
-            for (i = 0; i < chunk->length; i++)
-                row[i] = y[i * WHORLI_LANES + s];
-        else
-            for (i = 0; i < chunk->length; i++) {
-                row[2 * i] = y[i * WHORLI_LANES + 2 * s];
-                row[2 * i + 1] = y[i * WHORLI_LANES + 2 * s + 1];
-            }
-        whorli_split_far(job, chunk, s, row, scratch->sources + w * scratch->source_share);
-        if (converts)
-            whorli_vector_store(action->element, row, width * chunk->length, to);
+        whorli_split_far(job, chunk, s, rows.to[s], scratch->sources + w * scratch->source_share);
+        if (whorl_element_is_float(action->element))
+            whorli_vector_store(action->element, rows.to[s], rows.width * chunk->length,
+                                job->job->y + at * whorl_element_bytes(action->element));
     }
 }
 
@@ -1680,13 +1840,16 @@ static whorl_status whorli_split_apply(whorl_host *host, const whorli_action_job
         return status;
     whorli_split_carve_scratch(&layout, action, workers, &job.scratch);
     job.job = given;
+    job.pack_rows = whorli_split_pack_plain;
     job.near_rows = whorli_split_near_plain;
     job.far_rows = whorli_split_far_plain;
 #if WHORLI_TARGETS
     if (whorli_target() == 2) {
+        job.pack_rows = whorli_split_pack_avx512;
         job.near_rows = whorli_split_near_avx512;
         job.far_rows = whorli_split_far_avx512;
     } else if (whorli_target() == 1) {
+        job.pack_rows = whorli_split_pack_avx2;
         job.near_rows = whorli_split_near_avx2;
         job.far_rows = whorli_split_far_avx2;
     }
