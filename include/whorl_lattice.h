@@ -121,8 +121,9 @@ WHORL_API whorl_lattice_kind whorl_lattice_kind_named(const char *name, uint64_t
 WHORL_API uint64_t whorl_lattice_bytes(void);
 /*
  * Makes the cluster; the caller frees it with whorl_lattice_free. Cost O(sites^2).
- * Errors: WHORL_BAD_ARGUMENT (unknown kind, dependent spanning or primitive vectors, two basis sites in one place),
- * WHORL_TOO_LARGE (more than 64 sites), WHORL_NOT_FINITE, WHORL_OVER_LIMIT, WHORL_NO_MEMORY; *lattice is then NULL.
+ * Errors: WHORL_BAD_ARGUMENT (unknown kind, dependent spanning or primitive vectors, a cell a hundred times longer than
+ * wide, two basis sites in one place), WHORL_TOO_LARGE (more than 64 sites), WHORL_NOT_FINITE, WHORL_OVER_LIMIT,
+ * WHORL_NO_MEMORY; *lattice is then NULL.
  */
 WHORL_API whorl_status whorl_lattice_make(whorl_host *host, const whorl_lattice_desc *desc, whorl_lattice **lattice);
 WHORL_API void whorl_lattice_free(whorl_host *host, whorl_lattice *lattice);
@@ -535,6 +536,11 @@ static whorl_status whorli_lattice_measure(whorl_host *host, whorl_lattice *latt
     for (i = 0; i < 3; i++)
         for (j = 0; j < 3; j++)
             lattice->inverse_gram[i][j] /= determinant;
+    for (i = 0; i < lattice->dimension; i++) /* the walks over neighbours would take for ever */
+        for (j = 0; j < lattice->dimension; j++)
+            if (!(gram[j][j] * lattice->inverse_gram[i][i] <= 1e4))
+                return whorl_fail(host, WHORL_BAD_ARGUMENT, "the unit cell is more than a hundred times longer than wide: "
+                                                            "choose primitive vectors of similar length");
     for (k = 0; k < lattice->places; k++)
         for (i = 0; i < lattice->dimension; i++) {
             lattice->fraction[k][i] = 0.0;

@@ -332,29 +332,34 @@ static whorl_status whorli_reader_take(whorli_reader *reader, const char *word, 
     return whorli_reader_is(reader, word) ? whorli_reader_next(reader) : whorli_reader_expected(reader, what);
 }
 
-/* Letters to be changed, added or left out to turn one word into the other; 99 for long words. (Levenshtein 1966) */
+/*
+ * Letters to be changed, added, left out or swapped with their neighbour to turn one word into the other; 99 for long
+ * words. (Damerau, Commun. ACM 7, 171 (1964))
+ */
 static int32_t whorli_word_distance(const char *a, uint64_t a_length, const char *b, uint64_t b_length)
 {
-    int32_t row[33];
+    int32_t rows[3][33];
     uint64_t i, j;
     if (a_length > 32 || b_length > 32)
         return 99;
     for (j = 0; j <= b_length; j++)
-        row[j] = (int32_t)j;
-    for (i = 0; i < a_length; i++) {
-        int32_t corner = row[0];
-        row[0] = (int32_t)i + 1;
-        for (j = 0; j < b_length; j++) {
-            int32_t best = corner + (a[i] != b[j]);
-            corner = row[j + 1];
-            if (row[j] + 1 < best)
-                best = row[j] + 1;
-            if (corner + 1 < best)
-                best = corner + 1;
-            row[j + 1] = best;
+        rows[0][j] = (int32_t)j;
+    for (i = 1; i <= a_length; i++) {
+        const int32_t *last = rows[(i - 1) % 3], *before = rows[(i + 1) % 3];
+        int32_t *row = rows[i % 3];
+        row[0] = (int32_t)i;
+        for (j = 1; j <= b_length; j++) {
+            int32_t best = last[j - 1] + (a[i - 1] != b[j - 1]);
+            if (last[j] + 1 < best)
+                best = last[j] + 1;
+            if (row[j - 1] + 1 < best)
+                best = row[j - 1] + 1;
+            if (i > 1 && j > 1 && a[i - 1] == b[j - 2] && a[i - 2] == b[j - 1] && before[j - 2] + 1 < best)
+                best = before[j - 2] + 1;
+            row[j] = best;
         }
     }
-    return row[b_length];
+    return rows[a_length % 3][b_length];
 }
 
 /* Keeps the word nearest to a given one. */
