@@ -778,6 +778,9 @@ static void test_bad_input(void)
     check_refused(&desc, WHORL_BAD_ARGUMENT, "primitive vectors are not linearly independent");
     desc.dimension = 2;
     check_refused(&desc, WHORL_BAD_ARGUMENT, "basis sites 0 and 1");
+    desc.primitive[4] = 0.005; /* (1, 0), (0.5, 0.005) */
+    check_refused(&desc, WHORL_BAD_ARGUMENT, "similar length");
+    desc.primitive[4] = 1.0;
     basis[3] = huge;
     check_refused(&desc, WHORL_NOT_FINITE, "basis site 1");
     basis[3] = 1e9;
