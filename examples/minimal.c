@@ -21,8 +21,10 @@ int main(void)
         return fprintf(stderr, "%s\n", host.reason.text), 1;
     for (k = 0; k < whorl_levels_count(levels); k++) {
         whorl_level level = whorl_levels_at(levels, k);
-        printf("%16.12f +- %.0e  x%" PRIu64 "%s  S = %d/2  %s\n", level.energy, level.residual, level.multiplicity,
-               (level.flags & WHORL_LEVEL_OPEN) ? "+" : "", (int)level.twice_spin, level.sector);
+        if (level.flags & WHORL_LEVEL_OPEN)            /* from here on the four levels of a sector do not tell all */
+            break;
+        printf("%16.12f +- %.0e  x%" PRIu64 "  S = %g  %s\n", level.energy, level.residual, level.multiplicity,
+               0.5 * level.twice_spin, level.sector);
     }
     whorl_levels_free(&host, levels);
     return 0;

@@ -66,7 +66,7 @@ WHORLI_ARITHMETIC_BEGIN
 
 /* What to compute. Every field at 0 is its default. */
 typedef struct whorl_levels_desc {
-    int32_t wanted;          /* outermost eigenpairs of each sector, up to its dimension; 0: WHORL_LEVELS_WANTED */
+    int32_t wanted;          /* outermost eigenpairs of each sector (by Lanczos at most 1000); 0: WHORL_LEVELS_WANTED */
     whorl_end end;           /* WHORL_LOWEST or WHORL_HIGHEST */
     int32_t whole;           /* not 0: every eigenpair of every sector (dense: 8 D^2 bytes, time D^3) */
     double tolerance;        /* of Lanczos: residual relative to an estimate of ||H||; 0: 1e-10 */
