@@ -17,8 +17,8 @@
  *
  * It reads no files: the caller brings the text into memory.
  *
- * The text. A line that begins at the left edge begins a statement; lines that begin with a blank go on with it; # begins
- * a comment. Names are defined before they are used. Expressions are those of whorl_text.h.
+ * The text. A line that begins at the left edge begins a statement; lines that begin with a blank go on with it; #
+ * begins a comment. Names are defined before they are used. Expressions are those of whorl_text.h.
  *
  *     model     = { statement } ;
  *     statement = "title" words to the end of the line
@@ -161,8 +161,8 @@ typedef struct whorli_draft {
 
 /* ---- >>statements ------------------------------------------------------------------------------------------------ */
 
-static const char *const whorli_statements[10] WHORLI_UNUSED = {"title", "spins", "let",  "cluster", "place",
-                                                                "pairs", "group", "draw", "sum",     "add"};
+static const char whorli_statements[10][8] WHORLI_UNUSED = {"title", "spins", "let",  "cluster", "place",
+                                                            "pairs", "group", "draw", "sum",     "add"};
 
 static whorl_status whorli_draft_need_sites(whorli_draft *draft, uint64_t at)
 {
@@ -190,7 +190,8 @@ static whorl_status whorli_draft_finish(whorli_draft *draft, const char *expecte
 }
 
 /* A name that is not in use yet. */
-static whorl_status whorli_draft_new_name(whorli_draft *draft, const char *expected, const char **name, uint64_t *length)
+static whorl_status whorli_draft_new_name(whorli_draft *draft, const char *expected, const char **name,
+                                          uint64_t *length)
 {
     whorli_reader *reader = &draft->reader;
     whorl_text text;
@@ -271,7 +272,7 @@ static whorl_status whorli_draft_vector(whorli_draft *draft, double vector[3])
     loom->depth -= 3;
     return constant ? WHORL_OK
                     : whorli_reader_refuse(&draft->reader, at,
-                                           "positions cannot depend on parameters: write numbers, and scale r in the sum");
+                                           "positions cannot depend on parameters: write numbers, scale r in the sum");
 }
 
 /* title words to the end of the line */
@@ -299,7 +300,7 @@ static whorl_status whorli_draft_set_sites(whorli_draft *draft, int64_t sites, u
 {
     whorl_text text;
     if (draft->loom.sites > 0)
-        return whorli_reader_refuse(&draft->reader, at, "the number of spins is known already: leave this statement out");
+        return whorli_reader_refuse(&draft->reader, at, "the number of spins is known already: leave this out");
     if (sites >= 1 && sites <= 64) {
         draft->loom.sites = (int32_t)sites;
         draft->loom.list[0].count = (uint64_t)sites;
@@ -345,7 +346,7 @@ static whorl_status whorli_draft_let(whorli_draft *draft)
         status = whorli_draft_finish(draft, "an operator (+ - * / . x ^) or the end of the statement");
     if (status == WHORL_OK && (kind == WHORLI_OPERATOR || kind == WHORLI_SPIN_VECTOR))
         return whorli_reader_refuse(&draft->reader, at,
-                                    "`let` names numbers, vectors and matrices of numbers: put operators into `add` or `sum over`");
+                                    "`let` names numbers, vectors and matrices: operators belong into `add`");
     if (status == WHORL_OK)
         status = whorli_run(loom);
     memset(&value, 0, sizeof value);
@@ -423,7 +424,7 @@ static whorl_status whorli_draft_place(whorli_draft *draft)
             return whorli_draft_finish(draft, "a site and its position, or the end of the statement");
         status = whorli_draft_site(draft, &site);
         if (status == WHORL_OK && (draft->placed >> site & 1))
-            return whorli_reader_refuse(&draft->reader, where, "this site has a position already: leave one of them out");
+            return whorli_reader_refuse(&draft->reader, where, "this site has a position already: leave one out");
         if (status == WHORL_OK)
             status = whorli_draft_vector(draft, draft->position[site]);
         if (status == WHORL_OK)
@@ -536,7 +537,8 @@ static whorl_status whorli_draft_no_lattice(whorli_draft *draft)
     whorl_text text;
     int32_t k;
     if (reader->kind != WHORLI_WORD_NAME)
-        return whorli_reader_expected(reader, "a lattice: chain, ladder, square, triangular, honeycomb, kagome, cubic or cell");
+        return whorli_reader_expected(reader, "a lattice: chain, ladder, square, triangular, honeycomb, kagome, cubic "
+                                              "or cell");
     for (k = 1; k <= WHORL_LATTICE_CELL; k++)
         whorli_nearest_try(&nearest, whorl_lattice_kind_name(k), (uint64_t)strlen(whorl_lattice_kind_name(k)));
     text = whorli_reader_fail(reader, WHORL_BAD_TEXT, reader->start);
@@ -591,7 +593,8 @@ static whorl_status whorli_draft_cluster(whorli_draft *draft)
         }
     } else if (status == WHORL_OK) {
         status = whorli_reader_take(reader, "by", desc.kind == WHORL_LATTICE_CELL
-                                    ? "`by` and the spanning vectors" : "a number of sites, or `by` and the spanning vectors");
+                                                      ? "`by` and the spanning vectors"
+                                                      : "a number of sites, or `by` and the spanning vectors");
         for (k = 0; status == WHORL_OK && k < dimension; k++)
             status = whorli_draft_cells(draft, dimension, desc.spanning + 3 * k);
     }
@@ -683,7 +686,8 @@ static whorl_status whorli_draft_list(whorli_draft *draft, int32_t is_pairs)
     if (status == WHORL_OK)
         status = whorli_draft_need_sites(draft, at);
     if (status == WHORL_OK)
-        status = whorli_draft_new_name(draft, is_pairs ? "a name for the pairs" : "a name for the group", &name, &length);
+        status = whorli_draft_new_name(draft, is_pairs ? "a name for the pairs" : "a name for the group", &name,
+                                       &length);
     if (status == WHORL_OK)
         status = whorli_loom_need(loom, WHORLI_ROOM_LIST, loom->lists + 1);
     if (status == WHORL_OK)
@@ -739,7 +743,7 @@ static whorl_status whorli_draft_shell(whorli_draft *draft)
     uint64_t types = UINT64_MAX, at = reader->start, shell_at;
     whorl_status status = whorli_reader_next(reader);
     if (status == WHORL_OK && draft->lattice == NULL)
-        return whorli_reader_refuse(reader, at, "shells need a lattice: put a `cluster` statement above, or list the pairs");
+        return whorli_reader_refuse(reader, at, "shells need a lattice: put `cluster` above, or list the pairs");
     shell_at = reader->start;
     if (status == WHORL_OK && reader->kind == WHORLI_WORD_NUMBER && reader->whole == 0)
         return whorli_reader_expected(reader, "a neighbour shell, 1 to 100");
@@ -779,7 +783,7 @@ static whorl_status whorli_draft_need_places(whorli_draft *draft, uint64_t at)
                                     "distances need the positions of all sites: put `place` or `cluster` above");
     if (draft->periodic)
         return whorli_reader_refuse(&draft->reader, at,
-                                    "distances in a periodic cluster depend on the way around: take the pairs by `shell`");
+                                    "distances in a periodic cluster depend on the way around: use `shell`");
     return WHORL_OK;
 }
 
@@ -845,7 +849,7 @@ static whorl_status whorli_draft_pairs(whorli_draft *draft)
     if (status != WHORL_OK)
         return status;
     if (named && draft->loom.list[draft->loom.lists - 1].columns > 0)
-        return whorli_reader_refuse(reader, reader->start, "a table needs its pairs written out: 0-1 and its numbers, ...");
+        return whorli_reader_refuse(reader, reader->start, "a table needs its pairs written out, with their numbers");
     if (whorli_reader_at_end(reader))
         return whorli_reader_expected(reader, "pairs such as 0-1, or `shell`, `all` or `within`");
     if (whorli_reader_is(reader, "shell"))
@@ -949,11 +953,11 @@ static whorl_status whorli_draft_draw(whorli_draft *draft)
     draw.seed = (uint64_t)seed;
     for (k = 0; status == WHORL_OK && k < loom->draws; k++) {
         if (loom->draw[k].seed == draw.seed)
-            return whorli_reader_refuse(reader, at, "another draw has this seed and would give the same numbers: choose another");
+            return whorli_reader_refuse(reader, at, "another draw has this seed and the same numbers: choose another");
         over += loom->draw[k].list == draw.list;
     }
     if (status == WHORL_OK && over == WHORLI_MOST_DRAWS)
-        return whorli_reader_refuse(reader, at, "there are at most 8 draws over one list: draw over a copy of the list");
+        return whorli_reader_refuse(reader, at, "there are at most 8 draws over one list: copy the list");
     if (status == WHORL_OK)
         status = whorli_loom_need(loom, WHORLI_ROOM_DRAW, loom->draws + 1);
     if (status != WHORL_OK)
@@ -1181,6 +1185,7 @@ static whorl_status whorli_draft_weave(whorli_draft *draft, whorl_host *host, co
     memset(draft, 0, sizeof *draft);
     whorl_stage(host, "reading text", 0, length);
     whorli_loom_begin(&draft->loom, host, &draft->reader);
+    draft->loom.room[WHORLI_ROOM_ENTRY] += length / 6; /* three terms for each line of a long list */
     draft->loom.room[WHORLI_ROOM_PAIR] += length / 16;
     draft->loom.room[WHORLI_ROOM_DOUBLE] += length / 16;
     draft->realisation = realisation;
@@ -1213,7 +1218,8 @@ static void whorli_model_layout(whorl_layout *layout, whorl_model *plan, uint64_
     *model = (whorl_model *)whorl_layout_carve(layout, 1, sizeof(whorl_model));
     whorli_expression_layout(layout, &plan->e);
     plan->title = (char *)whorl_layout_carve(layout, title_length + 1, 1);
-    plan->position = (double *)whorl_layout_carve(layout, plan->placed ? 3 * (uint64_t)plan->e.sites : 0, sizeof(double));
+    plan->position = (double *)whorl_layout_carve(layout, plan->placed ? 3 * (uint64_t)plan->e.sites : 0,
+                                                  sizeof(double));
 }
 
 /* Reads; then makes the object, or only tells what it would take. */
@@ -1262,7 +1268,8 @@ whorl_status whorl_model_read(whorl_host *host, const char *text, uint64_t lengt
     return whorli_model_make(host, text, length, realisation, model, NULL);
 }
 
-whorl_status whorl_model_bytes(whorl_host *host, const char *text, uint64_t length, uint64_t realisation, uint64_t *bytes)
+whorl_status whorl_model_bytes(whorl_host *host, const char *text, uint64_t length, uint64_t realisation,
+                               uint64_t *bytes)
 {
     uint64_t before = host->bytes_used, peak = host->bytes_peak, object = 0, most;
     whorl_status status;
@@ -1398,7 +1405,8 @@ uint64_t whorl_model_term_count(const whorl_model *model)
     return model->e.term_count;
 }
 
-whorl_status whorl_model_weights(whorl_host *host, const whorl_model *model, const double *values, whorl_complex *weights)
+whorl_status whorl_model_weights(whorl_host *host, const whorl_model *model, const double *values,
+                                 whorl_complex *weights)
 {
     return whorl_expression_weights(host, &model->e, values, weights);
 }

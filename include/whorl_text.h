@@ -32,8 +32,8 @@
  * site k; i is the imaginary unit. From loose to tight: + and -; * and /; a sign; the scalar product; the vector
  * product; powers. So D.S[0] x S[1] is the triple product, -2^2 is -4, and 1/2*X[0] is half of X[0]. No product sign
  * may be left out. Numbers and operators multiply each other and vectors, numbers also matrices; the scalar product
- * joins vectors and matrices; vectors and matrices add among themselves. S[0].M.S[1] is sum_ab S_a M_ab S_b. Only numbers
- * divide, also those that contain parameters: J/(1 + a) is fine. Words that cannot name a parameter: i j r n d x
+ * joins vectors and matrices; vectors and matrices add among themselves. S[0].M.S[1] is sum_ab S_a M_ab S_b. Only
+ * numbers divide, also those that contain parameters: J/(1 + a) is fine. Words that cannot name parameters: i j r n d x
  * sqrt and the spins.
  *
  * Numbers are doubles; constants are computed from left to right as written, so that 0.1 + 0.2 is what C makes of it.
@@ -867,8 +867,9 @@ static whorl_status whorli_loom_atom(whorli_loom *loom, int32_t kind, uint32_t *
 
 /* ---- >>names ----------------------------------------------------------------------------------------------------- */
 
-static const char *const whorli_reserved[16] WHORLI_UNUSED = {"i", "j",  "r",  "n",  "d", "x", "sqrt", "X",
-                                                              "Y", "Z",  "S",  "Sx", "Sy", "Sz", "S+", "S-"};
+/* Tables hold letters, not pointers: those would need relocation and lie in writable memory. */
+static const char whorli_reserved[16][5] WHORLI_UNUSED = {"i", "j", "r", "n",  "d",  "x",  "sqrt", "X",
+                                                          "Y", "Z", "S", "Sx", "Sy", "Sz", "S+",   "S-"};
 
 static int32_t whorli_is_reserved(const char *text, uint64_t length)
 {
@@ -1020,8 +1021,8 @@ static int32_t whorli_compile_pop(whorli_loom *loom)
     return kind;
 }
 
-static whorl_status whorli_compile_operand(whorli_loom *loom, int32_t does, uint64_t at, uint32_t argument, double number,
-                                           int32_t kind)
+static whorl_status whorli_compile_operand(whorli_loom *loom, int32_t does, uint64_t at, uint32_t argument,
+                                           double number, int32_t kind)
 {
     whorl_status status = whorli_compile_step(loom, does, at, argument, number);
     if (status == WHORL_OK)
@@ -1072,7 +1073,7 @@ static int32_t whorli_kind_of(int32_t does, int32_t left, int32_t right)
 
 static whorl_status whorli_compile_misfit(whorli_loom *loom, int32_t does, uint64_t at, int32_t left, int32_t right)
 {
-    static const char *const advice[] = {
+    static const char advice[7][112] = {
         "cannot be added: make both numbers, operators, vectors or matrices",
         "cannot be subtracted: make both numbers, operators, vectors or matrices",
         "cannot be multiplied by `*`: write `.` for the scalar product, ` x ` for the vector product",
@@ -1175,7 +1176,7 @@ static whorl_status whorli_compile_spin(whorli_loom *loom, uint32_t which)
     } else if (whorli_reader_is(reader, "i") || whorli_reader_is(reader, "j")) {
         return whorli_reader_refuse(reader, reader->start, loom->site_names > 0
                                     ? "j is the second site of a pair: in a sum over sites there is only i"
-                                    : "i and j are sites only in a `sum over` a list: write the number of the site here");
+                                    : "i and j are sites only in a `sum over` a list: write the number of the site");
     } else {
         return whorli_reader_expected(reader, loom->site_names > 1 ? "a site: a number, i or j"
                                             : loom->site_names > 0 ? "a site: a number or i"
@@ -1216,7 +1217,7 @@ static whorl_status whorli_compile_unknown(whorli_loom *loom)
 /* A name where a factor is expected. */
 static whorl_status whorli_compile_name(whorli_loom *loom)
 {
-    static const char *const spins[9] = {"X", "Y", "Z", "Sx", "Sy", "Sz", "S+", "S-", "S"};
+    static const char spins[9][3] = {"X", "Y", "Z", "Sx", "Sy", "Sz", "S+", "S-", "S"};
     whorli_reader *reader = loom->reader;
     const whorli_name *name;
     uint64_t at = reader->start;
@@ -1236,16 +1237,19 @@ static whorl_status whorli_compile_name(whorli_loom *loom)
         return status == WHORL_OK ? whorli_reader_next(reader) : status;
     }
     name = whorli_loom_find(loom, reader->text + at, reader->end - at);
-    if (name == NULL && (whorli_reader_is(reader, "r") || whorli_reader_is(reader, "n") || whorli_reader_is(reader, "d")))
+    if (name == NULL && reader->end - at == 1 && (reader->text[at] == 'r' || reader->text[at] == 'n' ||
+                                                  reader->text[at] == 'd'))
         return whorli_reader_refuse(reader, at, loom->site_names > 0
-                                    ? "r, n and d need positions, which this list does not have: add `place` or `cluster` above it"
-                                    : "r, n and d are the distance, direction and displacement of a pair: use them in `sum over`");
+                                    ? "r, n and d need positions: put `place` above, or in a periodic cluster take "
+                                      "the pairs by `shell`"
+                                    : "r, n and d are the distance, direction and displacement of a pair: use them "
+                                      "in `sum over`");
     if (name == NULL && whorli_reader_is(reader, "x"))
         return whorli_reader_refuse(reader, at, "x is the vector product and stands between two vectors");
     if (name == NULL)
         return whorli_compile_unknown(loom);
     if (name->role == WHORLI_IS_DRAW)
-        return whorli_reader_refuse(reader, at, "this random number belongs to another list: use it in a sum over that one");
+        return whorli_reader_refuse(reader, at, "this random number belongs to another list: sum over that");
     if (name->role == WHORLI_IS_LIST)
         return whorli_reader_refuse(reader, at, "this names a list: use it as `sum over NAME: ...`");
     status = whorli_compile_operand(loom, name->role == WHORLI_IS_PARAMETER ? WHORLI_DO_PARAMETER
@@ -1291,7 +1295,8 @@ static whorl_status whorli_compile_separator(whorli_loom *loom, int32_t semicolo
     if (group->does == WHORLI_DO_ROOT)
         return whorli_reader_refuse(reader, reader->start, "sqrt takes one number");
     if (semicolon && (group->columns != 2 || group->rows == 2))
-        return whorli_reader_refuse(reader, reader->start, "a matrix has three rows of three: (a, b, c; d, e, f; g, h, k)");
+        return whorli_reader_refuse(reader, reader->start, "a matrix has three rows of three: (a, b, c; d, e, f; g, h, "
+                                                           "k)");
     if (!semicolon && group->columns == 2)
         return whorli_reader_refuse(reader, reader->start, group->rows > 0
                                     ? "a row of a matrix has three numbers: end it with `;`"
@@ -1339,7 +1344,7 @@ static whorl_status whorli_compile_close(whorli_loom *loom)
 static whorl_status whorli_compile_operator(whorli_loom *loom, int32_t *factor, int32_t *done)
 {
     static const struct {
-        const char *word;
+        char word[2];
         uint8_t does, level, from_right;
     } signs[7] = {{"+", WHORLI_DO_ADD, 1, 0},    {"-", WHORLI_DO_SUBTRACT, 1, 0}, {"*", WHORLI_DO_MULTIPLY, 2, 0},
                   {"/", WHORLI_DO_DIVIDE, 2, 0}, {".", WHORLI_DO_DOT, 4, 0},      {"x", WHORLI_DO_CROSS, 5, 0},
@@ -1379,8 +1384,8 @@ static whorl_status whorli_compile_operator(whorli_loom *loom, int32_t *factor, 
 }
 
 /*
- * Compiles the expression that begins at the current word; the reader then is at the word behind it. *kind tells what it
- * is. In_parenthesis: the expression is one parenthesis and ends with it.
+ * Compiles the expression that begins at the current word; the reader then is at the word behind it. *kind tells what
+ * it is. in_parenthesis: the expression is one parenthesis and ends with it.
  */
 static whorl_status whorli_compile(whorli_loom *loom, int32_t in_parenthesis, int32_t *kind)
 {
@@ -1575,7 +1580,8 @@ static whorl_status whorli_run_spin(whorli_loom *loom, uint32_t argument)
     }
     status = whorli_slice_open(loom);
     if (status == WHORL_OK && which < 6)
-        return whorli_slice_add(loom, which % 3 == 2 ? 0 : bit, which % 3 == 0 ? 0 : bit, which < 3 ? 1.0 : 0.5, 0.0, 0);
+        return whorli_slice_add(loom, which % 3 == 2 ? 0 : bit, which % 3 == 0 ? 0 : bit, which < 3 ? 1.0 : 0.5, 0.0,
+                                0);
     if (status == WHORL_OK) /* S+ = Sx + i Sy, S- = Sx - i Sy */
         status = whorli_slice_add(loom, bit, 0, 0.5, 0.0, 0);
     if (status == WHORL_OK)
@@ -1749,7 +1755,7 @@ static whorl_status whorli_run_divide(whorli_loom *loom, const whorli_step *step
     whorli_entry by;
     whorl_status status;
     if (whorli_slice_count(loom, divisor) == 0)
-        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "division by zero: make sure that what stands behind `/` is not 0");
+        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "division by zero: what stands behind `/` must not be 0");
     if (whorli_slice_count(loom, divisor) > 1) {
         whorli_step times = *step;
         status = whorli_run_atom(loom, WHORLI_ATOM_INVERSE, 1);
@@ -1792,7 +1798,7 @@ static whorl_status whorli_run_root(whorli_loom *loom)
     if (count > 1 || top->weight != 0)
         return whorli_run_atom(loom, WHORLI_ATOM_ROOT, 1);
     if (top->im != 0.0 || top->re < 0.0)
-        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "the root needs a real number from 0 on: write i*sqrt(...) of its modulus");
+        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "the root needs a real number from 0 on: write i*sqrt(...)");
     top->re = sqrt(top->re);
     return WHORL_OK;
 }
@@ -1842,7 +1848,8 @@ static whorl_status whorli_run_power(whorli_loom *loom, const whorli_step *step)
     int32_t power;
     whorl_status status;
     if (count > 1 || (count == 1 && (exponent->weight != 0 || exponent->im != 0.0)))
-        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "the exponent must be a number without parameters: write it out");
+        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "the exponent must be a number without parameters: write it "
+                                                        "out");
     if (value > WHORLI_MOST_EXPONENT || value < -WHORLI_MOST_EXPONENT || 2.0 * value != floor(2.0 * value))
         return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "exponents are whole or half numbers from -1024 to 1024");
     loom->entries = loom->edge[top];
@@ -2045,7 +2052,7 @@ static whorl_status whorli_expression_check(whorli_loom *loom, const whorl_expre
     if (e->sum_count <= WHORL_MOST_SUMS)
         return WHORL_OK;
     return whorl_fail(loom->host, WHORL_TOO_LARGE,
-                      "there are more than 4096 different weights: let fewer parameters be multiplied by numbers of their own");
+                      "there are more than 4096 different products of parameters: give fewer terms their own");
 }
 
 /* ---- >>values ---------------------------------------------------------------------------------------------------- */
@@ -2136,14 +2143,15 @@ static whorl_status whorli_valuer_fail(whorli_valuer *valuer, const whorli_atom 
     return WHORL_NOT_FINITE;
 }
 
-static whorl_status whorli_valuer_check(whorli_valuer *valuer, whorl_complex value, uint32_t zero, const whorli_atom *atom)
+static whorl_status whorli_valuer_check(whorli_valuer *valuer, whorl_complex value, uint32_t zero,
+                                        const whorli_atom *atom)
 {
     if (zero != UINT32_MAX)
         return whorli_valuer_fail(valuer, valuer->e->atom + zero,
                                   "at these values of the parameters something is divided by zero: change them");
     if (!whorl_is_finite(value.re) || !whorl_is_finite(value.im))
         return whorli_valuer_fail(valuer, atom,
-                                  "at these values of the parameters a number becomes too large for a double: change them");
+                                  "at these values of the parameters a number is too large for a double: change them");
     return WHORL_OK;
 }
 
@@ -2173,12 +2181,12 @@ static whorl_status whorli_valuer_atom(whorli_valuer *valuer, uint64_t k)
         return status;
     if (atom->kind == WHORLI_ATOM_INVERSE) {
         if (value.re == 0.0 && value.im == 0.0)
-            return whorli_valuer_fail(valuer, atom, "at these values of the parameters this divides by zero: change them");
+            return whorli_valuer_fail(valuer, atom, "at these values of the parameters this is a division by zero");
         value = whorli_complex_divide(whorl_complex_of(1.0, 0.0), value);
     } else {
         if (value.im != 0.0 || value.re < 0.0)
             return whorli_valuer_fail(valuer, atom,
-                                      "at these values of the parameters this is the root of a negative number: change them");
+                                      "at these values of the parameters this is the root of a negative number");
         value.re = sqrt(value.re);
     }
     valuer->atom[k] = value;
@@ -2294,7 +2302,7 @@ static whorl_status whorli_names_check(whorl_host *host, const whorli_loom *loom
         whorli_quote(&text, name, length);
     whorl_text_add(&text, name == NULL ? "a name is NULL: pass names that begin with a letter"
                         : !good ? " is no name: begin with a letter and go on with letters, digits and _"
-                        : whorli_is_reserved(name, length) ? " has a meaning of its own in expressions: choose another name"
+                        : whorli_is_reserved(name, length) ? " has a meaning of its own: choose another name"
                                                            : " names two parameters: choose another name for one");
     return WHORL_BAD_ARGUMENT;
 }
@@ -2358,8 +2366,8 @@ static whorl_status whorli_expression_try(whorli_loom *loom, const char *const *
 }
 
 /* Reads into the loom, whose scratch is kept when it is good. */
-static whorl_status whorli_expression_weave(whorl_host *host, whorli_loom *loom, whorli_reader *reader, const char *text,
-                                            uint64_t length, int32_t sites, const char *const *names,
+static whorl_status whorli_expression_weave(whorl_host *host, whorli_loom *loom, whorli_reader *reader,
+                                            const char *text, uint64_t length, int32_t sites, const char *const *names,
                                             const whorl_name_value *pairs, uint64_t name_count)
 {
     whorl_status status = whorli_text_valid(host, text, length, sites);
