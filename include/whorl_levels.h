@@ -10,8 +10,8 @@
  * The method, step by step:
  *   1. Symmetry is found in the Pauli algebra, never from numbers of a spectrum: [H, S^z] = 0 (then sectors are the
  *      numbers of down spins), else down-spin parity Z..Z (two sectors), else all states at once. Spin inversion X..X
- *      serves for one thing only: S^z = m and -m are solved once, with weight 2, and the label says so. [H, S^+] = 0
- *      and [H, S^2] = 0 tell whether a level has a total spin.
+ *      and time reversal serve for one thing only: S^z = m and -m are solved once, with weight 2, and the label says
+ *      so. [H, S^+] = 0 and [H, S^2] = 0 tell whether a level has a total spin.
  *   2. The sum is made real by a diagonal gauge where there is one.
  *   3. Sector by sector: a small sector is diagonalised whole, from a matrix that is built term by term; of a large one
  *      the outermost eigenpairs come from thick-restart Lanczos, with a fresh random start as a check that none is
@@ -212,7 +212,8 @@ WHORL_API whorl_level_pair whorl_levels_pair_at(const whorl_levels *levels, uint
  * The eigenvector of eigenpair k of a sector, unit norm, in the original basis (no gauge), over the states of
  * whorl_levels_space(levels, sector), elements of type whorl_levels_vector_element: owned by the result. NULL where
  * desc.vectors was not set, or k is past the end or past `wanted`. For the sector -m of a pair of weight 2 flip all
- * spins. A vector of a degenerate level need not have the S of its eigenpair: the level as a whole does.
+ * spins, and take the complex conjugate where time reversal holds without spin inversion. A vector of a degenerate
+ * level need not have the S of its eigenpair: the level as a whole does.
  */
 WHORL_API const void *whorl_levels_vector(const whorl_levels *levels, uint64_t sector, uint64_t k);
 WHORL_API whorl_element whorl_levels_vector_element(const whorl_levels *levels, uint64_t sector);
@@ -224,6 +225,7 @@ typedef struct whorl_levels_symmetry {
     int32_t number;      /* 1: [H, S^z] = 0 to 16 eps max|c|, term by term */
     int32_t parity;      /* 1: [H, Z..Z] = 0 exactly */
     int32_t inversion;   /* 1: [H, X..X] = 0 exactly */
+    int32_t reversal;    /* 1: invariant under time reversal, exactly: every string acts on an even number of sites */
     int32_t spin;        /* 1: SU(2): [H, S^+] = 0 to 16 eps max|c| */
     int32_t spin_square; /* 1: [H, S^2] = 0, likewise; -1: too many terms to tell */
     int32_t real;        /* 1: real, perhaps after the gauge */
@@ -560,18 +562,20 @@ static double whorli_levels_bracket(const whorl_sum *a, const whorl_sum *b, whor
     return most;
 }
 
-/* What is exact: parity, inversion and the largest |coefficient|. */
+/* What is exact: parity, inversion, time reversal (it turns each Pauli matrix round); and the largest |coefficient|. */
 static double whorli_levels_simple_symmetry(const whorl_sum *sum, whorl_levels_symmetry *found)
 {
     double largest = 0.0;
     uint64_t k;
-    found->parity = found->inversion = 1;
+    found->parity = found->inversion = found->reversal = 1;
     for (k = 0; k < sum->count; k++) {
         const whorl_term *term = sum->terms + k;
         if (whorl_bits_parity(term->x))
             found->parity = 0;
         if (whorl_bits_parity(term->z))
             found->inversion = 0;
+        if ((whorl_bits_count(term->x | term->z) & 1) != 0)
+            found->reversal = 0;
         if (fabs(term->re) > largest)
             largest = fabs(term->re);
     }
@@ -717,7 +721,8 @@ static void whorli_levels_plan_numbers(whorli_levels_plan *plan)
     int32_t down, sites = plan->sum.sites;
     for (down = 0; down <= sites; down++) {
         int32_t twice_sz = sites - 2 * down;
-        int32_t mirrored = plan->symmetry.inversion && twice_sz != 0 && whorli_levels_selected(&plan->want, -twice_sz);
+        int32_t mirrored = (plan->symmetry.inversion || plan->symmetry.reversal) && twice_sz != 0 &&
+                           whorli_levels_selected(&plan->want, -twice_sz);
         whorli_level_sector *sector;
         if (!whorli_levels_selected(&plan->want, twice_sz) || (mirrored && twice_sz < 0))
             continue;

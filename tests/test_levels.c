@@ -57,7 +57,7 @@ static uint64_t bit(int32_t site)
 
 /* Random sums of every symmetry class. */
 enum { CLASS_SPIN, CLASS_CHIRAL, CLASS_NUMBER, CLASS_NUMBER_COMPLEX, CLASS_FIELD, CLASS_PARITY, CLASS_GAUGE, CLASS_NONE,
-       CLASS_DIAGONAL, CLASS_COUNT };
+       CLASS_DIAGONAL, CLASS_REVERSIBLE, CLASS_COUNT };
 
 static void add_random(model *m, int32_t kind, int32_t sites, uint64_t seed)
 {
@@ -70,13 +70,13 @@ static void add_random(model *m, int32_t kind, int32_t sites, uint64_t seed)
             uint64_t both = bit(i) | bit(j);
             if (kind == CLASS_SPIN || kind == CLASS_CHIRAL || kind == CLASS_FIELD)
                 add_exchange(m, i, j, NEXT);
-            if (kind == CLASS_NUMBER || kind == CLASS_NUMBER_COMPLEX) {
+            if (kind == CLASS_NUMBER || kind == CLASS_NUMBER_COMPLEX || kind == CLASS_REVERSIBLE) {
                 double c = NEXT;
                 add_string(m, both, 0, c);
                 add_string(m, both, both, c);
                 add_string(m, 0, both, NEXT);
             }
-            if (kind == CLASS_NUMBER_COMPLEX) { /* D (S_i x S_j)_z: XY - YX */
+            if (kind == CLASS_NUMBER_COMPLEX || kind == CLASS_REVERSIBLE) { /* D (S_i x S_j)_z: XY - YX */
                 double c = NEXT;
                 add_string(m, both, bit(j), c);
                 add_string(m, both, bit(i), -c);
@@ -329,7 +329,6 @@ static void test_rings(void)
         char id[64];
         row e0, gap;
         want.tolerance = 1e-12;
-        host.threads = 2;
         if (sites == 16) { /* the sectors that matter */
             want.sectors = sectors;
             want.sector_count = 3;
@@ -544,10 +543,10 @@ static void test_random_classes(void)
 #ifndef HAVE_LAPACK
     CHECK_SKIP("needs LAPACK (Debian: liblapack-dev)");
 #else
-    static const int32_t number[CLASS_COUNT] = {1, 1, 1, 1, 0, 0, 0, 0, 1};
-    static const int32_t parity[CLASS_COUNT] = {1, 1, 1, 1, 0, 1, 1, 0, 1};
-    static const int32_t square[CLASS_COUNT] = {1, 1, 0, 0, 1, 0, 0, 0, 0};
-    static const int32_t real[CLASS_COUNT] = {1, 0, 1, 0, 1, 0, 1, 0, 1};
+    static const int32_t number[CLASS_COUNT] = {1, 1, 1, 1, 0, 0, 0, 0, 1, 1};
+    static const int32_t parity[CLASS_COUNT] = {1, 1, 1, 1, 0, 1, 1, 0, 1, 1};
+    static const int32_t square[CLASS_COUNT] = {1, 1, 0, 0, 1, 0, 0, 0, 0, 0};
+    static const int32_t real[CLASS_COUNT] = {1, 0, 1, 0, 1, 0, 1, 0, 1, 0};
     int32_t kind, sites;
     for (kind = 0; kind < CLASS_COUNT; kind++)
         for (sites = 3; sites <= 7; sites += 2) {
@@ -571,6 +570,9 @@ static void test_random_classes(void)
             CHECK(found.spin == (kind == CLASS_SPIN || kind == CLASS_CHIRAL) && found.defect == 0.0);
             check_whole(levels, sites);
             check_against(levels, values, n, 1e-13 * whorl_sum_norm_bound(sum));
+            CHECK(whorl_levels_sector_at(levels, 0).weight ==
+                  (kind == CLASS_SPIN || kind == CLASS_CHIRAL || kind == CLASS_REVERSIBLE ? 2 : 1));
+            CHECK(found.reversal == (kind == CLASS_SPIN || kind == CLASS_REVERSIBLE || kind == CLASS_GAUGE));
             want.plain = 1;
             plain = solve(&host, sum, &want);
             if (plain != NULL) {
@@ -681,6 +683,20 @@ static void test_few_against_whole(void)
         }
 }
 
+/* The vector of the sector with the other S^z: all spins flipped, and conjugated where only time reversal gives it. */
+static void check_mirror(const whorl_levels *levels, const whorl_sum *sum, uint64_t sector, uint64_t k, const double *v)
+{
+    double sign = whorl_levels_symmetry_of(levels).inversion ? 1.0 : -1.0, *x, norm = whorl_sum_norm_bound(sum);
+    uint64_t i, n = UINT64_C(1) << sum->sites;
+    x = judge_reals(2 * n);
+    for (i = 0; i < n; i++) {
+        x[2 * (n - 1 - i)] = v[2 * i];
+        x[2 * (n - 1 - i) + 1] = sign * v[2 * i + 1];
+    }
+    CHECK(judge_residual(sum, NULL, n, whorl_levels_pair_at(levels, sector, k).energy, x, 1) <= 2e-12 * norm);
+    free(x);
+}
+
 /* Vectors: unit norm, orthogonal, and residuals by the naive product of the sum as it was given (through the gauge). */
 static void test_vectors(void)
 {
@@ -733,6 +749,8 @@ static void test_vectors(void)
                           1e-13 * whorl_sum_norm_bound(&m->sum));
                     if (k > 0)
                         CHECK(fabs(cross_re) + fabs(cross_im) < 1e-11);
+                    if (whorl_levels_sector_at(levels, s).weight == 2)
+                        check_mirror(levels, &m->sum, s, k, to);
                 }
                 CHECK(whorl_levels_vector(levels, s, n < 4 ? n : 4) == NULL);
             }
