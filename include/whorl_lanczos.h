@@ -267,8 +267,8 @@ static whorl_status whorli_lanczos_check(whorl_host *host, const whorl_map *map,
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "end must be WHORL_LOWEST or WHORL_HIGHEST");
     if (!whorl_is_finite(desc->tolerance) || desc->tolerance < 0.0)
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "the tolerance must be a number above 0, or 0 for the default");
-    if (desc->window < 0 || desc->window > 4096)
-        return whorl_fail(host, WHORL_BAD_ARGUMENT, "the window must be 0 (chosen) or up to 4096 vectors");
+    if (desc->window < 0 || desc->window > WHORL_VECTOR_MOST_COLUMNS)
+        return whorl_fail(host, WHORL_BAD_ARGUMENT, "the window must be 0 (chosen) or up to 2048 vectors");
     if (desc->lean && desc->wanted > 1)
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "the lean form finds one pair: ask for one, or leave lean at 0");
     return WHORL_OK;
@@ -431,10 +431,41 @@ const void *whorl_lanczos_state(const whorl_lanczos *solver, uint64_t *bytes)
     return solver->state;
 }
 
+/* Can every count of a state be used as an index? */
+static int32_t whorli_lanczos_is_sound(const whorli_lanczos_state *s)
+{
+    int32_t steps = s->lean ? WHORLI_LEAN_STEPS : s->window;
+    return s->wanted >= 0 && s->wanted <= WHORL_LANCZOS_MOST_WANTED && (uint64_t)s->wanted <= s->n && s->window >= 1 &&
+           s->window <= WHORL_VECTOR_MOST_COLUMNS && (!s->lean || s->wanted == 1) &&
+           s->column_bytes == ((s->n * whorl_element_bytes(s->element) + 63) & ~UINT64_C(63)) &&
+           s->phase >= WHORLI_LANCZOS_START && s->phase <= WHORLI_LANCZOS_DONE &&
+           (s->lean || s->phase != WHORLI_LANCZOS_SUM) && s->accepted >= 0 && s->accepted <= s->wanted && s->filled >= 0 &&
+           s->filled <= steps && s->base >= 0 && s->base <= s->filled && s->verify >= 0 && s->verify <= s->filled &&
+           s->shown >= 0 && s->shown <= steps && s->step >= 0 && s->step <= steps &&
+           (s->phase != WHORLI_LANCZOS_GROW || (s->lean ? s->step : s->filled) < steps) &&
+           (s->phase != WHORLI_LANCZOS_CHECK || s->filled > 0) &&
+           (s->phase != WHORLI_LANCZOS_VERIFY || s->lean || s->filled < s->window || !(s->beta > 0.0));
+}
+
+/* Is the order of the accepted pairs one of their places? */
+static int32_t whorli_lanczos_is_listed(const whorli_lanczos_state *s)
+{
+    const int32_t *order = (const int32_t *)(const void *)((const char *)s + s->at_order);
+    int32_t k, j;
+    for (k = 0; k < s->accepted; k++) {
+        if (order[k] < s->wanted - s->accepted || order[k] >= s->wanted)
+            return 0;
+        for (j = 0; j < k; j++)
+            if (order[j] == order[k])
+                return 0;
+    }
+    return 1;
+}
+
 whorl_status whorl_lanczos_resume(whorl_host *host, const whorl_map *map, const void *state, uint64_t bytes,
                                   whorl_lanczos **solver)
 {
-    whorli_lanczos_state plan;
+    whorli_lanczos_state plan, made;
     whorli_lanczos_parts parts;
     whorl_status status = whorl_map_check(host, map);
     *solver = NULL;
@@ -447,16 +478,20 @@ whorl_status whorl_lanczos_resume(whorl_host *host, const whorl_map *map, const 
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "this is no state of the solver: pass a copy of whorl_lanczos_state");
     if (plan.n != map->rows || plan.element != map->element || !map->hermitian)
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "the state belongs to another map: resume with the one it was made for");
-    if (plan.wanted < 0 || plan.wanted > WHORL_LANCZOS_MOST_WANTED || plan.window < 1 || plan.window > 4096)
+    if (!whorli_lanczos_is_sound(&plan))
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "the state is damaged: pass a copy of whorl_lanczos_state");
     status = whorli_lanczos_take(host, &plan, &parts);
     if (status != WHORL_OK)
         return status;
-    if (parts.state->bytes != bytes) {
+    made = *parts.state;
+    if (made.bytes == bytes)
+        memcpy(parts.state, state, (size_t)bytes);
+    if (made.bytes != bytes || made.at_value != plan.at_value || made.at_residual != plan.at_residual ||
+        made.at_order != plan.at_order || made.at_projected != plan.at_projected || made.at_rotation != plan.at_rotation ||
+        made.at_ritz != plan.at_ritz || made.at_columns != plan.at_columns || !whorli_lanczos_is_listed(parts.state)) {
         whorl_lanczos_free(host, parts.solver);
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "the state is damaged: pass a copy of whorl_lanczos_state");
     }
-    memcpy(parts.state, state, (size_t)bytes);
     *solver = parts.solver;
     return WHORL_OK;
 }
@@ -895,17 +930,21 @@ static whorl_status whorli_lanczos_verify(whorl_host *host, const whorl_map *map
 static int32_t whorli_lanczos_is_due(const whorli_lanczos_state *s)
 {
     int32_t interval = s->n >= 65536 ? 4 : s->n >= 4096 ? 8 : 12;
+    if (interval < s->window / 8)
+        interval = s->window / 8;
     return s->filled == s->window || !(s->beta > 0.0) || (s->filled - s->base) % interval == 0;
 }
 
-/* The space shows nothing below the list: is that the end? */
+/*
+ * The space shows nothing below the list: is that the end? Not while its lowest Ritz vector may still hide a lower level:
+ * one that makes up a part w of it leaves a residual of at least sqrt(w (1 - w)) times the distance between the two. A
+ * residual of 1/32 of the distance to the list keeps w below 1/1000.
+ */
 static int32_t whorli_lanczos_verdict(whorli_lanczos_state *s)
 {
     const double *ritz = whorli_lanczos_reals(s, s->at_ritz);
     double residual = whorli_lanczos_estimate(s, 0), margin = 2.0 * s->tolerance * s->norm;
-    int32_t settled = residual <= s->tolerance * s->norm;
-    if (!settled && !(s->filled >= 10 && residual <= 1e-3 * s->norm &&
-                      ritz[0] - residual > whorli_lanczos_threshold(s) + margin))
+    if (residual > s->tolerance * s->norm && 32.0 * residual > ritz[0] - whorli_lanczos_threshold(s) - margin)
         return 0;
     if (s->fresh && s->gained == 0) {
         s->shown = s->filled;

@@ -286,6 +286,36 @@ static void hidden_level(void)
     }
 }
 
+/*
+ * Doublets 0.2 % of the norm apart, a list that ends inside one. While the check's lowest vector is a mixture of the listed
+ * level and the next, its value looks like one beyond the list: with these seeds a residual of 1e-3 of the norm is too
+ * early to say that nothing is left.
+ */
+static void check_of_mixtures(void)
+{
+    static const uint64_t seeds[6] = {0, 41, 63, 79, 236, 300};
+    double values[400];
+    known_map known = {values, 0, NULL};
+    whorl_map map = make_map(&known, 400, WHORL_REAL_DOUBLE, diagonal_apply);
+    whorl_host host = whorl_host_default();
+    whorl_lanczos_desc desc = whorl_lanczos_default();
+    int i, k;
+    for (i = 0; i < 40; i++)
+        values[i] = i < 2 ? -1.0 : values[i - 2] + 0.002;
+    for (i = 40; i < 400; i++)
+        values[i] = -0.96 + 1.96 * (i - 39) / 360.0;
+    desc.wanted = 5;
+    for (i = 0; i < 6; i++) {
+        whorl_lanczos *solver;
+        desc.seed = seeds[i];
+        solver = solve(&host, &map, &desc);
+        CHECK(whorl_lanczos_checked(solver) && whorl_lanczos_cut(solver));
+        for (k = 0; k < 5; k++)
+            CHECK_NEAR(whorl_lanczos_value(solver, k), values[k], 1e-9, "close doublets");
+        whorl_lanczos_free(&host, solver);
+    }
+}
+
 /* Random real and complex matrices against the dense solver; the tightest tolerance against LAPACK's measures. */
 static void random_matrices(void)
 {
@@ -506,6 +536,49 @@ static void cancel_and_go_on(void)
     free(values);
 }
 
+/* A state with any one of its leading bytes changed is refused or can be advanced without harm. */
+static void damaged_states(void)
+{
+    double values[300];
+    known_map known = {values, 0, NULL};
+    whorl_map map = make_map(&known, 300, WHORL_REAL_DOUBLE, diagonal_apply);
+    int i, lean;
+    for (i = 0; i < 300; i++)
+        values[i] = sqrt((double)i);
+    for (lean = 0; lean <= 1; lean++) {
+        whorl_host host = whorl_host_default();
+        whorl_lanczos_desc desc = whorl_lanczos_default();
+        whorl_lanczos *solver = NULL, *other = NULL;
+        uint64_t bytes = 0, at, refused = 0;
+        const void *state;
+        unsigned char *copy;
+        desc.lean = lean;
+        desc.wanted = 1;
+        CHECK_STATUS(whorl_lanczos_make(&host, &map, &desc, &solver), WHORL_OK, &host);
+        CHECK_STATUS(whorl_lanczos_advance(&host, &map, solver, 31), WHORL_UNFINISHED, &host);
+        state = whorl_lanczos_state(solver, &bytes);
+        copy = (unsigned char *)malloc((size_t)bytes);
+        for (at = 0; at < 256; at++) {
+            memcpy(copy, state, (size_t)bytes);
+            copy[at] ^= 0x5A;
+            other = NULL;
+            if (whorl_lanczos_resume(&host, &map, copy, bytes, &other) == WHORL_OK) {
+                whorl_status status = whorl_lanczos_advance(&host, &map, other, 300);
+                CHECK(status == WHORL_OK || status == WHORL_UNFINISHED || status == WHORL_NOT_CONVERGED ||
+                      status == WHORL_NOT_FINITE);
+            } else {
+                CHECK(other == NULL);
+                refused++;
+            }
+            whorl_lanczos_free(&host, other);
+        }
+        CHECK(refused > 100); /* sizes, places and counts are most of it */
+        CHECK_STATUS(whorl_lanczos_resume(&host, &map, copy, bytes - 1, &other), WHORL_BAD_ARGUMENT, &host);
+        free(copy);
+        whorl_lanczos_free(&host, solver);
+    }
+}
+
 /* ---- failures --------------------------------------------------------------------------------------------------------- */
 
 static whorl_status solve_once(whorl_host *host, void *argument)
@@ -542,6 +615,9 @@ static void failures(void)
     CHECK_STATUS(whorl_lanczos_make(&host, &other, NULL, &solver), WHORL_NOT_HERMITIAN, &host);
     CHECK(solver == NULL);
     desc.wanted = -1;
+    CHECK_STATUS(whorl_lanczos_make(&host, &map, &desc, &solver), WHORL_BAD_ARGUMENT, &host);
+    desc = whorl_lanczos_default();
+    desc.window = WHORL_VECTOR_MOST_COLUMNS + 1;
     CHECK_STATUS(whorl_lanczos_make(&host, &map, &desc, &solver), WHORL_BAD_ARGUMENT, &host);
     desc = whorl_lanczos_default();
     desc.tolerance = -1.0;
@@ -596,11 +672,13 @@ int main(void)
     check_run("hard_spectra", hard_spectra);
     check_run("few_distinct", few_distinct);
     check_run("hidden_level", hidden_level);
+    check_run("check_of_mixtures", check_of_mixtures);
     check_run("random_matrices", random_matrices);
     check_run("lean_form", lean_form);
     check_run("byte_limits", byte_limits);
     check_run("same_bits", same_bits);
     check_run("cancel_and_go_on", cancel_and_go_on);
+    check_run("damaged_states", damaged_states);
     check_run("failures", failures);
     return check_end();
 }
