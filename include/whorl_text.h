@@ -19,7 +19,7 @@
  *     signed     = { "+" | "-" } dotted ;
  *     dotted     = crossed { "." crossed } ;                   the scalar product
  *     crossed    = powered { "x" powered } ;                   the vector product
- *     powered    = factor [ "^" signed ] ;                     whole and half powers, from the right: 2^3^2 = 2^9
+ *     powered    = factor [ "^" signed ] ;                     from the right: 2^3^2 = 2^9
  *     factor     = number | name | "i" | spin | "(" expression ")" | "sqrt" "(" expression ")" | vector | matrix ;
  *     spin       = ( "X" | "Y" | "Z" | "Sx" | "Sy" | "Sz" | "S+" | "S-" | "S" ) "[" site "]" ;
  *     vector     = "(" expression "," expression "," expression ")" ;
@@ -35,6 +35,7 @@
  * joins vectors and matrices; vectors and matrices add among themselves. S[0].M.S[1] is sum_ab S_a M_ab S_b. Only
  * numbers divide, also those that contain parameters: J/(1 + a) is fine. Words that cannot name parameters: i j r n d x
  * sqrt and the spins.
+ * Operators have whole powers from 0 on; numbers have any real power, of a negative base whole ones: r^-a is fine.
  *
  * Numbers are doubles; constants are computed from left to right as written, so that 0.1 + 0.2 is what C makes of it.
  * Texts are limited to 2^31 - 1 bytes; nesting is limited by memory only.
@@ -403,7 +404,8 @@ static void whorli_nearest_add(const whorli_nearest *nearest, whorl_text *to)
 
 /*
  * The loom turns expressions into entries: complex coefficient times weight times Pauli string. A weight is a monomial,
- * a product of powers of atoms; an atom is a parameter, or one over a polynomial, or the root of one. Numbers
+ * a product of powers of atoms; an atom is a parameter, or one over a polynomial, the root of one, or a power with
+ * another one as exponent. Numbers
  * and operators are both lists of entries ("slices"), those of numbers with the string 1, each weight once; a vector is
  * three slices, a matrix nine. Slices lie on a stack, so adding two operators is free: they are neighbours already.
  */
@@ -429,11 +431,12 @@ typedef struct whorli_part {
     uint32_t weight, spare;
 } whorli_part;
 
-enum { WHORLI_ATOM_PARAMETER, WHORLI_ATOM_INVERSE, WHORLI_ATOM_ROOT };
+enum { WHORLI_ATOM_PARAMETER, WHORLI_ATOM_INVERSE, WHORLI_ATOM_ROOT, WHORLI_ATOM_POWER };
 typedef struct whorli_atom {
     int32_t kind;
     uint32_t parameter;
-    whorli_range base; /* the polynomial */
+    whorli_range base;     /* the polynomial */
+    whorli_range exponent; /* another one, of a power */
     int32_t line, column;
 } whorli_atom;
 
@@ -827,29 +830,46 @@ static whorl_status whorli_loom_keep(whorli_loom *loom, uint64_t k, whorli_range
     return WHORL_OK;
 }
 
-/* The weight of an atom made of the polynomial on top of the stack; the same atom where it is known. */
+static uint64_t whorli_parts_hash(const whorli_loom *loom, whorli_range range, uint64_t hash)
+{
+    uint32_t k;
+    for (k = 0; k < range.count; k++) {
+        const whorli_part *part = loom->part + range.first + k;
+        uint64_t bits[2];
+        memcpy(bits, &part->re, 8);
+        memcpy(bits + 1, &part->im, 8);
+        hash = whorli_mix(whorli_mix(whorli_mix(hash, bits[0]), bits[1]), part->weight);
+    }
+    return whorli_mix(hash, range.count);
+}
+
+static int32_t whorli_same_parts(const whorli_loom *loom, whorli_range a, whorli_range b)
+{
+    return a.count == b.count &&
+           (a.count == 0 || memcmp(loom->part + a.first, loom->part + b.first, a.count * sizeof(whorli_part)) == 0);
+}
+
+/*
+ * The weight of an atom made of the polynomial on top of the stack (of a power: of the two on top, base and exponent);
+ * the same atom where it is known.
+ */
 static whorl_status whorli_loom_atom(whorli_loom *loom, int32_t kind, uint32_t *weight)
 {
-    uint64_t mask = whorli_slots(loom->room[WHORLI_ROOM_ATOM]) - 1, hash, at;
-    whorli_range base;
+    uint64_t mask = whorli_slots(loom->room[WHORLI_ROOM_ATOM]) - 1, at, parts = loom->parts;
+    whorli_range base, exponent = {0, 0};
     whorli_factor factor;
-    whorl_status status = whorli_loom_keep(loom, loom->depth - 1, &base);
-    uint32_t k;
+    whorl_status status = whorli_loom_keep(loom, loom->depth - (kind == WHORLI_ATOM_POWER ? 2 : 1), &base);
+    if (status == WHORL_OK && kind == WHORLI_ATOM_POWER)
+        status = whorli_loom_keep(loom, loom->depth - 1, &exponent);
     if (status != WHORL_OK)
         return status;
-    hash = whorli_mix(base.count, (uint64_t)kind);
-    for (k = 0; k < base.count; k++) {
-        uint64_t bits[2];
-        memcpy(bits, &loom->part[base.first + k].re, 8);
-        memcpy(bits + 1, &loom->part[base.first + k].im, 8);
-        hash = whorli_mix(whorli_mix(whorli_mix(hash, bits[0]), bits[1]), loom->part[base.first + k].weight);
-    }
+    at = whorli_parts_hash(loom, exponent, whorli_parts_hash(loom, base, (uint64_t)kind)) & mask;
     factor.power = 1;
-    for (at = hash & mask; loom->atom_slots[at] != 0; at = (at + 1) & mask) {
+    for (; loom->atom_slots[at] != 0; at = (at + 1) & mask) {
         const whorli_atom *known = loom->atom + (loom->atom_slots[at] - 1);
-        if (known->kind == kind && known->base.count == base.count &&
-            memcmp(loom->part + known->base.first, loom->part + base.first, base.count * sizeof(whorli_part)) == 0) {
-            loom->parts = base.first;
+        if (known->kind == kind && whorli_same_parts(loom, known->base, base) &&
+            whorli_same_parts(loom, known->exponent, exponent)) {
+            loom->parts = parts;
             factor.atom = loom->atom_slots[at] - 1;
             return whorli_loom_monomial(loom, &factor, 1, weight);
         }
@@ -859,6 +879,7 @@ static whorl_status whorli_loom_atom(whorli_loom *loom, int32_t kind, uint32_t *
     memset(loom->atom + loom->atoms, 0, sizeof(whorli_atom));
     loom->atom[loom->atoms].kind = kind;
     loom->atom[loom->atoms].base = base;
+    loom->atom[loom->atoms].exponent = exponent;
     loom->atom[loom->atoms].line = (int32_t)loom->at; /* becomes line and column in the end */
     factor.atom = (uint32_t)loom->atoms++;
     loom->atom_slots[at] = (uint32_t)loom->atoms;
@@ -1729,6 +1750,132 @@ static whorl_status whorli_run_cross(whorli_loom *loom)
     return status;
 }
 
+/*
+ * x^y for real x > 0 in twofold precision (Dekker, Numer. Math. 18, 224 (1971)): exp(y log x) with the logarithm from
+ * the series of the inverse hyperbolic tangent and the exponential from its own. No libm, so the same bits everywhere;
+ * the result is within one unit in the last place.
+ */
+typedef struct whorli_twin {
+    double hi, lo;
+} whorli_twin;
+
+static whorli_twin whorli_twin_sum(double a, double b)
+{
+    whorli_twin s;
+    double part;
+    s.hi = a + b;
+    part = s.hi - a;
+    s.lo = (a - (s.hi - part)) + (b - part);
+    return s;
+}
+
+static whorli_twin whorli_twin_product(double a, double b)
+{
+    const double split = 134217729.0; /* 2^27 + 1 */
+    double a_part = split * a, b_part = split * b;
+    double a_hi = a_part - (a_part - a), b_hi = b_part - (b_part - b), a_lo = a - a_hi, b_lo = b - b_hi;
+    whorli_twin p;
+    p.hi = a * b;
+    p.lo = ((a_hi * b_hi - p.hi) + a_hi * b_lo + a_lo * b_hi) + a_lo * b_lo;
+    return p;
+}
+
+static whorli_twin whorli_twin_add(whorli_twin a, whorli_twin b)
+{
+    whorli_twin s = whorli_twin_sum(a.hi, b.hi);
+    return whorli_twin_sum(s.hi, s.lo + (a.lo + b.lo));
+}
+
+static whorli_twin whorli_twin_multiply(whorli_twin a, whorli_twin b)
+{
+    whorli_twin p = whorli_twin_product(a.hi, b.hi);
+    return whorli_twin_sum(p.hi, p.lo + (a.hi * b.lo + a.lo * b.hi));
+}
+
+static whorli_twin whorli_twin_divide(whorli_twin a, whorli_twin b)
+{
+    double quotient = a.hi / b.hi;
+    whorli_twin p = whorli_twin_product(quotient, b.hi);
+    return whorli_twin_sum(quotient, (((a.hi - p.hi) - p.lo) + (a.lo - quotient * b.lo)) / b.hi);
+}
+
+static whorli_twin whorli_twin_of(double value)
+{
+    whorli_twin twin;
+    twin.hi = value;
+    twin.lo = 0.0;
+    return twin;
+}
+
+/* value times 2^power, in two steps so that no factor overflows */
+static double whorli_scale_two(double value, int32_t power)
+{
+    int32_t halves[2], k;
+    halves[0] = power / 2;
+    halves[1] = power - power / 2;
+    for (k = 0; k < 2; k++) {
+        uint64_t bits = (uint64_t)(1023 + halves[k]) << 52;
+        double factor;
+        memcpy(&factor, &bits, 8);
+        value *= factor;
+    }
+    return value;
+}
+
+static whorli_twin whorli_log_two(void)
+{
+    whorli_twin two;
+    two.hi = 0.69314718055994529;
+    two.lo = 2.3190468138462996e-17;
+    return two;
+}
+
+static whorli_twin whorli_twin_log(double x)
+{
+    uint64_t bits;
+    int32_t exponent = 0, k;
+    whorli_twin t, square, sum = whorli_twin_of(0.0);
+    if (x < 1e-300) {
+        x *= 18014398509481984.0; /* 2^54: no denormals */
+        exponent = -54;
+    }
+    memcpy(&bits, &x, 8);
+    exponent += (int32_t)(bits >> 52) - 1023;
+    bits = (bits & ((UINT64_C(1) << 52) - 1)) | UINT64_C(1023) << 52;
+    memcpy(&x, &bits, 8);
+    if (x > 1.4142135623730951) {
+        x *= 0.5;
+        exponent++;
+    }
+    t = whorli_twin_divide(whorli_twin_of(x - 1.0), whorli_twin_sum(x, 1.0));
+    square = whorli_twin_multiply(t, t);
+    for (k = 22; k >= 0; k--) /* log x = 2 (t + t^3/3 + t^5/5 + ...), |t| < 0.172 */
+        sum = whorli_twin_add(whorli_twin_multiply(sum, square),
+                              whorli_twin_divide(whorli_twin_of(2.0), whorli_twin_of(2.0 * k + 1.0)));
+    return whorli_twin_add(whorli_twin_multiply(whorli_twin_of((double)exponent), whorli_log_two()),
+                           whorli_twin_multiply(sum, t));
+}
+
+static double whorli_real_power(double x, double y)
+{
+    whorli_twin log = whorli_twin_log(x), rest, sum = whorli_twin_of(1.0);
+    double rough = y * log.hi, turns;
+    int32_t k;
+    if (log.hi == 0.0) /* otherwise |y| < 746 / 2^-53 below */
+        return 1.0;
+    if (!(rough < 710.0)) /* above the largest double: infinity, which the caller refuses */
+        return whorli_scale_two(whorli_scale_two(1.0, 1023), 1023);
+    if (rough < -746.0)
+        return 0.0;
+    rest = whorli_twin_multiply(whorli_twin_of(y), log);
+    turns = floor(rest.hi / whorli_log_two().hi + 0.5);
+    rest = whorli_twin_add(rest, whorli_twin_multiply(whorli_twin_of(-turns), whorli_log_two()));
+    for (k = 26; k >= 1; k--) /* exp r = 1 + r/1 (1 + r/2 (1 + ...)), |r| < 0.35 */
+        sum = whorli_twin_add(whorli_twin_of(1.0), whorli_twin_divide(whorli_twin_multiply(sum, rest),
+                                                                      whorli_twin_of((double)k)));
+    return whorli_scale_two(sum.hi + sum.lo, (int32_t)turns);
+}
+
 static whorl_complex whorli_complex_divide(whorl_complex a, whorl_complex b)
 {
     double scale = fabs(b.re) > fabs(b.im) ? fabs(b.re) : fabs(b.im), re = b.re / scale, im = b.im / scale, square;
@@ -1840,22 +1987,48 @@ static whorl_status whorli_run_power_many(whorli_loom *loom, int32_t power)
     return status;
 }
 
+/* Base and exponent are the two slices on top; either has parameters, or the exponent is neither whole nor half. */
+static whorl_status whorli_run_power_real(whorli_loom *loom, int32_t constant, double exponent)
+{
+    uint64_t base = loom->depth - 2, count = whorli_slice_count(loom, base);
+    whorli_entry *entry = loom->entry + loom->edge[base];
+    uint32_t weight = 0;
+    double value = 1.0;
+    whorl_status status = WHORL_OK;
+    if (count == 0 && !(constant && exponent > 0.0))
+        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "a power of zero: make sure that the base is not 0");
+    if (count == 1 && entry->weight == 0 && constant) {
+        if (entry->im != 0.0 || entry->re < 0.0)
+            return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "only positive numbers have powers that are not whole");
+        value = whorli_real_power(entry->re, exponent);
+        if (!whorl_is_finite(value))
+            return whorli_overflowed(loom);
+    } else if (count > 0) {
+        status = whorli_loom_atom(loom, WHORLI_ATOM_POWER, &weight);
+    }
+    loom->entries = loom->edge[base];
+    loom->depth--;
+    if (status != WHORL_OK || count == 0 || value == 0.0)
+        return status;
+    return whorli_slice_add(loom, 0, 0, value, 0.0, weight);
+}
+
 static whorl_status whorli_run_power(whorli_loom *loom, const whorli_step *step)
 {
     uint64_t top = loom->depth - 1, count = whorli_slice_count(loom, top);
     const whorli_entry *exponent = loom->entry + loom->edge[top];
-    double value = count == 0 ? 0.0 : exponent->re;
-    int32_t power;
+    int32_t constant = count == 0 || (count == 1 && exponent->weight == 0), power;
+    double value = count == 0 || !constant ? 0.0 : exponent->re;
     whorl_status status;
-    if (count > 1 || (count == 1 && (exponent->weight != 0 || exponent->im != 0.0)))
-        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "the exponent must be a number without parameters: write it "
-                                                        "out");
-    if (value > WHORLI_MOST_EXPONENT || value < -WHORLI_MOST_EXPONENT || 2.0 * value != floor(2.0 * value))
-        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "exponents are whole or half numbers from -1024 to 1024");
+    if (count == 1 && exponent->im != 0.0)
+        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "exponents are real numbers: leave i out");
+    if (step->left == WHORLI_OPERATOR &&
+        (!constant || value < 0.0 || value > WHORLI_MOST_EXPONENT || value != floor(value)))
+        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "operators have whole powers from 0 to 1024 only");
+    if (!constant || value > WHORLI_MOST_EXPONENT || value < -WHORLI_MOST_EXPONENT || 2.0 * value != floor(2.0 * value))
+        return whorli_run_power_real(loom, constant, value);
     loom->entries = loom->edge[top];
     loom->depth--;
-    if (step->left == WHORLI_OPERATOR && (value < 0.0 || value != floor(value)))
-        return whorli_loom_refuse(loom, WHORL_BAD_TEXT, "operators have whole powers from 0 on only");
     if (value != floor(value)) {
         status = whorli_run_root(loom);
         if (status != WHORL_OK)
@@ -2155,6 +2328,28 @@ static whorl_status whorli_valuer_check(whorli_valuer *valuer, whorl_complex val
     return WHORL_OK;
 }
 
+/* base to the power of a polynomial: by products where that is whole, of a positive base otherwise. */
+static whorl_status whorli_valuer_power(whorli_valuer *valuer, const whorli_atom *atom, whorl_complex *base)
+{
+    uint32_t zero = UINT32_MAX;
+    whorl_complex exponent = whorli_valuer_polynomial(valuer, atom->exponent, &zero);
+    whorl_status status = whorli_valuer_check(valuer, exponent, zero, atom);
+    int32_t whole = exponent.re == floor(exponent.re) && fabs(exponent.re) <= WHORLI_MOST_EXPONENT;
+    int32_t nothing = base->re == 0.0 && base->im == 0.0;
+    if (status != WHORL_OK)
+        return status;
+    if (exponent.im != 0.0 || (!whole && (base->im != 0.0 || base->re < 0.0)) || (nothing && exponent.re <= 0.0))
+        return whorli_valuer_fail(valuer, atom, "at these values of the parameters this power is not defined");
+    if (whole) {
+        *base = whorli_complex_power(*base, (uint32_t)fabs(exponent.re));
+        if (exponent.re < 0.0)
+            *base = whorli_complex_divide(whorl_complex_of(1.0, 0.0), *base);
+    } else if (!nothing) {
+        *base = whorl_complex_of(whorli_real_power(base->re, exponent.re), 0.0);
+    }
+    return whorli_valuer_check(valuer, *base, UINT32_MAX, atom);
+}
+
 static whorl_status whorli_valuer_atom(whorli_valuer *valuer, uint64_t k)
 {
     const whorli_atom *atom = valuer->e->atom + k;
@@ -2177,8 +2372,14 @@ static whorl_status whorli_valuer_atom(whorli_valuer *valuer, uint64_t k)
     }
     value = whorli_valuer_polynomial(valuer, atom->base, &zero);
     status = whorli_valuer_check(valuer, value, zero, atom);
+    if (status == WHORL_OK && atom->kind == WHORLI_ATOM_POWER)
+        status = whorli_valuer_power(valuer, atom, &value);
     if (status != WHORL_OK)
         return status;
+    if (atom->kind == WHORLI_ATOM_POWER) {
+        valuer->atom[k] = value;
+        return WHORL_OK;
+    }
     if (atom->kind == WHORLI_ATOM_INVERSE) {
         if (value.re == 0.0 && value.im == 0.0)
             return whorli_valuer_fail(valuer, atom, "at these values of the parameters this is a division by zero");
@@ -2201,9 +2402,10 @@ static whorl_status whorli_valuer_run(whorli_valuer *valuer)
     for (k = valuer->e->atoms; k-- > 0;)
         if (valuer->needed[k]) {
             const whorli_atom *atom = valuer->e->atom + k;
-            if (atom->kind != WHORLI_ATOM_PARAMETER)
+            if (atom->kind != WHORLI_ATOM_PARAMETER) {
                 whorli_valuer_need(valuer, atom->base);
-            else if (whorli_valuer_follows(valuer, atom))
+                whorli_valuer_need(valuer, atom->exponent);
+            } else if (whorli_valuer_follows(valuer, atom))
                 whorli_valuer_need(valuer, valuer->e->parameter[atom->parameter].formula);
         }
     for (k = 0; status == WHORL_OK && k < valuer->e->atoms; k++)
@@ -2639,6 +2841,8 @@ whorl_status whorl_sum_write(whorl_host *host, const whorl_sum *sum, char *text,
 typedef struct whorli_writing {
     whorli_range monomial; /* factors still to be written */
     whorli_range rest;     /* parts of the polynomial still to be written behind them */
+    whorli_range exponent; /* and then those of its exponent */
+    int32_t is_power;
     int32_t power;         /* of the atom that this polynomial is */
     int32_t wrote;         /* something of this polynomial, or of this monomial (in `began`) */
     int32_t began;
@@ -2690,18 +2894,26 @@ static void whorli_write_weight(whorl_text *to, const whorl_expression *e, uint3
             } else if (depth == WHORLI_MOST_NESTING) {
                 whorl_text_add(to, "...");
             } else {
-                whorl_text_add(to, atom->kind == WHORLI_ATOM_ROOT ? "sqrt(" : "(");
+                whorl_text_add(to, atom->kind == WHORLI_ATOM_ROOT ? "sqrt("
+                                 : atom->kind == WHORLI_ATOM_POWER ? "((" : "(");
                 now++;
                 depth++;
                 memset(now, 0, sizeof *now);
-                now->power = atom->kind == WHORLI_ATOM_ROOT ? factor.power : -factor.power;
+                now->power = atom->kind == WHORLI_ATOM_INVERSE ? -factor.power : factor.power;
                 now->rest = atom->base;
+                now->exponent = atom->exponent;
+                now->is_power = atom->kind == WHORLI_ATOM_POWER;
             }
         } else if (now->rest.count > 0) {
             whorli_write_part(to, e, now);
+        } else if (now->is_power == 1) {
+            whorl_text_add(to, ")^(");
+            now->is_power = 2;
+            now->rest = now->exponent;
+            now->wrote = 0;
         } else {
             if (--depth > 0) {
-                whorl_text_add(to, ")");
+                whorl_text_add(to, now->is_power ? "))" : ")");
                 whorli_write_power(to, now->power);
             }
         }

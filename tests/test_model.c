@@ -125,6 +125,9 @@ static void test_places(void)
     used = whorl_terms_string(terms, 0, 3, 2.0 / (1.5 * 1.5 * 1.5 * 1.5 * 1.5 * 1.5));
     sprintf(text, "%spairs near: within 1.5\nlet C = 2\nsum over near: C/r^6*Z[i]*Z[j]\n", places);
     check_model(text, 3, terms, used, 1e-16);
+    used = whorl_terms_string(terms, 3, 0, 2.0 * pow(1.5, -2.75)); /* an exponent to be swept */
+    sprintf(text, "%spairs near: within 1.5\nlet p = 2.75\nsum over near: 2/r^p*X[i]*X[j]\n", places);
+    check_model(text, 3, terms, used, 1e-15);
     used = 0; /* a field gradient: d is the position in a sum over sites */
     for (i = 0; i < 3; i++)
         used += whorl_terms_field(terms + used, i, at[i], NULL);
