@@ -39,7 +39,8 @@ static void round_trip(whorl_host *host, const whorl_sum *sum)
     text = (char *)malloc((size_t)room);
     demand(whorl_sum_write(host, sum, text, room, &used) == WHORL_OK && used + 1 == room);
     if (whorl_sum_read(host, text, used, sum->sites, NULL, 0, terms, sum->count, &back) != WHORL_CANCELLED)
-        demand(back.count == sum->count && (sum->count == 0 || memcmp(back.terms, sum->terms, (size_t)sum->count * sizeof *terms) == 0));
+        demand(back.count == sum->count &&
+               (sum->count == 0 || memcmp(back.terms, sum->terms, (size_t)sum->count * sizeof *terms) == 0));
     free(text);
     free(terms);
 }

@@ -343,8 +343,8 @@ static void test_weights(void)
         CHECK(whorl_sum_check(&host, whorl_expression_sums(expression) + k) == WHORL_OK);
     }
     CHECK(seen == 31 && total == whorl_expression_term_count(expression));
-    CHECK_STATUS(whorl_expression_weight_write(&host, expression, 5, written, sizeof written, &used), WHORL_BAD_ARGUMENT,
-                 &host);
+    CHECK_STATUS(whorl_expression_weight_write(&host, expression, 5, written, sizeof written, &used),
+                 WHORL_BAD_ARGUMENT, &host);
     CHECK_STATUS(whorl_expression_weight_write(&host, expression, 0, written, 1, &used), WHORL_NO_ROOM, &host);
     weights[0] = whorl_complex_of(77.0, 77.0);
     CHECK_STATUS(whorl_expression_weights(&host, expression, bad, weights), WHORL_NOT_FINITE, &host); /* 1 + h = 0 */
@@ -629,18 +629,21 @@ static void test_announced(void)
     CHECK_STATUS(whorl_expression_read(&host, busy, sizeof busy - 1, 3, symbols, 3, &expression), WHORL_OK, &host);
     whorl_expression_free(&host, expression);
     whorl_arena_make(&arena, base, bytes - 1);
-    CHECK_STATUS(whorl_expression_read(&host, busy, sizeof busy - 1, 3, symbols, 3, &expression), WHORL_NO_MEMORY, &host);
+    CHECK_STATUS(whorl_expression_read(&host, busy, sizeof busy - 1, 3, symbols, 3, &expression), WHORL_NO_MEMORY,
+                 &host);
     CHECK(expression == NULL && host.bytes_used == 0);
     host = whorl_host_default();
     host.byte_limit = bytes - 1;
-    CHECK_STATUS(whorl_expression_read(&host, busy, sizeof busy - 1, 3, symbols, 3, &expression), WHORL_OVER_LIMIT, &host);
+    CHECK_STATUS(whorl_expression_read(&host, busy, sizeof busy - 1, 3, symbols, 3, &expression), WHORL_OVER_LIMIT,
+                 &host);
     host.byte_limit = bytes;
     CHECK_STATUS(whorl_expression_read(&host, busy, sizeof busy - 1, 3, symbols, 3, &expression), WHORL_OK, &host);
     whorl_expression_free(&host, expression);
     host.byte_limit = 0;
     host.take = no_memory;
     host.memory_context = &asked;
-    CHECK_STATUS(whorl_expression_read(&host, busy, sizeof busy - 1, 3, symbols, 3, &expression), WHORL_NO_MEMORY, &host);
+    CHECK_STATUS(whorl_expression_read(&host, busy, sizeof busy - 1, 3, symbols, 3, &expression), WHORL_NO_MEMORY,
+                 &host);
     CHECK(asked == 1);
     free(memory);
 }
