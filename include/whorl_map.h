@@ -156,11 +156,14 @@ WHORLI_ARITHMETIC_BEGIN
  */
 #if WHORLI_GNU && (defined(__x86_64__) || defined(__amd64__))
 #define WHORLI_TARGETS 1
-#define WHORLI_TARGET_AVX2 __attribute__((target("avx2")))
 #ifdef __clang__
+#define WHORLI_TARGET_AVX2 __attribute__((target("avx2")))
 #define WHORLI_TARGET_AVX512 __attribute__((target("avx512f,avx512vl,avx512bw,avx512dq")))
-#else
-#define WHORLI_TARGET_AVX512 __attribute__((target("avx512f,avx512vl,avx512bw,avx512dq,prefer-vector-width=512")))
+#else /* the attribute makes GCC forget the pragma of the arithmetic where the host compiles for FMA: say it again */
+#define WHORLI_TARGET_FIXED optimize("O3", "no-fast-math", "fp-contract=off")
+#define WHORLI_TARGET_AVX2 __attribute__((target("avx2"), WHORLI_TARGET_FIXED))
+#define WHORLI_TARGET_AVX512 \
+    __attribute__((target("avx512f,avx512vl,avx512bw,avx512dq,prefer-vector-width=512"), WHORLI_TARGET_FIXED))
 #endif
 #else
 #define WHORLI_TARGETS 0
