@@ -317,6 +317,8 @@ static void print_symmetry(const whorl_levels *levels)
         printf("; [H, S^2] = 0");
     if (s.inversion)
         printf("; spin inversion");
+    if (s.reversal)
+        printf("; time reversal");
     printf("; %s arithmetic%s\n", s.real ? "real" : "complex", s.gauge != 0 ? " after turning spins about z" : "");
     if (s.defect > 0.0)
         printf("            conserved up to rounding: %.1e, included in the residuals\n", s.defect);

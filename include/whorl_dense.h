@@ -919,6 +919,7 @@ static void whorli_dense_group(const whorli_dense *work, uint64_t column, uint64
     double *a = work->a + column * work->rows;
     uint64_t k, row;
     memset(lanes, 0, sizeof lanes);
+    memset(heads, 0, sizeof heads);
     for (k = 0; k < group; k++) {
         heads[k].v = whorli_dense_get(work, work->v, column + k);
         heads[k].w = whorli_dense_get(work, work->w, column + k);
