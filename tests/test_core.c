@@ -71,7 +71,7 @@ static int reads_like_strtod(const char *text)
     return good;
 }
 
-/* Digits from the first to the last that is not zero; *power number = 0.digits 10^power. Returns how many. */
+/* Digits from the first to the last that is not zero; *power of 0.digits 10^power. Returns how many. */
 static int32_t digits_of(const char *text, char *digits, int32_t *power)
 {
     int32_t count = 0, point = 0;
@@ -151,6 +151,7 @@ static void test_shortest(void)
     for (i = 0; i < 50000; i++) {
         double value = random_double((uint64_t)i);
         int32_t count, power, other_power;
+        uint64_t around;
         if (i % 7 == 0) /* powers of two, where the gap below is half the gap above */
             value = of_bits(random_below(0x7fe) << 52);
         if (i % 7 == 1) /* short decimals */
@@ -170,6 +171,16 @@ static void test_shortest(void)
         if (count > 1) {
             snprintf(other, sizeof other, "%.*e", (int)count - 2, value);
             long_ones += strtod(other, NULL) == value;
+            /* and the two around the value: below a power of two the nearest may miss where the other one reads back */
+            snprintf(other, sizeof other, "%.40e", value);
+            digits_of(other, nearest, &other_power);
+            nearest[count - 1] = '\0';
+            around = (uint64_t)strtoull(nearest, NULL, 10);
+            other_power -= (int32_t)strlen(nearest);
+            snprintf(other, sizeof other, "%" PRIu64 "e%d", around, (int)other_power);
+            long_ones += strtod(other, NULL) == fabs(value);
+            snprintf(other, sizeof other, "%" PRIu64 "e%d", around + 1, (int)other_power);
+            long_ones += strtod(other, NULL) == fabs(value);
         }
         snprintf(other, sizeof other, "%.*e", (int)count - 1, value);
         digits_of(other, nearest, &other_power);
@@ -740,6 +751,8 @@ static void test_limit(void)
         host.byte_limit = figure == NULL ? 1 : (uint64_t)strtoull(figure + 9, NULL, 10);
         CHECK(host.byte_limit == 192 + bytes);
         CHECK_STATUS(whorl_block_take(&host, payload[k], &second), WHORL_OK, &host);
+        if (second.start == NULL)
+            return;
         CHECK(host.bytes_used == host.byte_limit && host.bytes_peak == host.byte_limit && host.takes == 2);
         CHECK(((uintptr_t)second.at & 63) == 0 && second.at >= (char *)second.start);
         CHECK(second.at + payload[k] <= (char *)second.start + second.taken);
