@@ -130,9 +130,10 @@ static void test_random_patterns(void)
             length = whorl_real_write_fixed(value, 6, got, sizeof got);
             bad_fixed += strcmp(got, want) != 0 || length != (int32_t)strlen(want);
         }
+        if (i % 8 >= 4)
+            continue;
         snprintf(want, sizeof want, "%.39e", value);
-        if (i % 8 < 4)
-            bad_read += !reads_like_strtod(want);
+        bad_read += !reads_like_strtod(want);
         plain_exponent(want);
         length = whorl_real_write_digits(value, 40, got, sizeof got);
         bad_digits += strcmp(got, want) != 0 || length != (int32_t)strlen(want);
@@ -148,7 +149,7 @@ static void test_shortest(void)
 {
     char text[64], other[64], digits[64], nearest[64];
     long i, long_ones = 0, far_ones = 0, seen[20] = {0};
-    for (i = 0; i < 50000; i++) {
+    for (i = 0; i < 40000; i++) {
         double value = random_double((uint64_t)i);
         int32_t count, power, other_power;
         uint64_t around;
