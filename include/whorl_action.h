@@ -156,7 +156,7 @@ typedef struct whorli_action_character {
 } whorli_action_character;
 
 /* Parities of so many independent masks give the factor of a simple flip, from a table. */
-#define WHORLI_SIMPLE_RANK 4
+#define WHORLI_SIMPLE_RANK 7
 
 typedef struct whorli_action_flip {
     uint64_t x, odd;
@@ -212,6 +212,16 @@ typedef struct whorli_split {
     whorli_split_pair *pairs;      /* [list_room * pair_room] */
 } whorli_split;
 
+/* See >>runs. */
+typedef struct whorli_runs {
+    int32_t used;
+    int32_t bits, run_bits, row_bits; /* of reals: a vector, a run, a row of one high part */
+    struct whorli_run_flip *flips;    /* as the action's */
+    double *lane_values;              /* [values][8] */
+    double *diagonal;                 /* [row]: the part of the diagonal without high parts */
+    uint64_t *signs;                  /* [row / 8]: bit j: the parity with the diagonal's character j */
+} whorli_runs;
+
 struct whorl_action {
     whorl_block block;
     const whorl_space *source, *target;
@@ -230,7 +240,9 @@ struct whorl_action {
     whorli_action_character *characters;
     whorli_action_flip *flips; /* by x, odd */
     double *values;            /* factors of simple flips */
+    uint64_t value_room;
     whorli_split split;
+    whorli_runs runs;
 };
 
 static int32_t whorli_action_entry_order(const void *left, const void *right)
@@ -282,6 +294,24 @@ static whorl_complex whorli_action_turn(double re, double im, int32_t quarter)
     }
 }
 
+/*
+ * Values of simple flips: 2^rank each, rank at most the number of strings. With several sums strings of one flip may
+ * meet: then 2^r / r a string.
+ */
+static uint64_t whorli_action_value_room(const whorl_action_desc *desc, uint64_t entries)
+{
+    uint64_t room = 0, i = 0;
+    if (desc->sum_count != 1)
+        return whorl_size_multiply(entries, (UINT64_C(1) << WHORLI_SIMPLE_RANK) / WHORLI_SIMPLE_RANK + 1);
+    while (i < desc->sums->count) {
+        uint64_t x = desc->sums->terms[i].x, strings = 0;
+        for (; i < desc->sums->count && desc->sums->terms[i].x == x; i++)
+            strings++;
+        room += UINT64_C(1) << (strings < WHORLI_SIMPLE_RANK ? strings : WHORLI_SIMPLE_RANK);
+    }
+    return room;
+}
+
 /* 1 if an earlier sum of the list has this flip. */
 static int32_t whorli_action_seen(const whorl_action_desc *desc, uint64_t k, uint64_t x)
 {
@@ -305,6 +335,9 @@ static void whorli_split_plan(const whorl_action_desc *desc, whorl_action *plan)
 static void whorli_split_carve(whorl_layout *layout, whorl_action *plan);
 static void whorli_split_fill_space(whorl_action *action);
 static void whorli_split_fill_terms(whorl_action *action);
+static void whorli_runs_plan(whorl_action *plan);
+static void whorli_runs_carve(whorl_layout *layout, whorl_action *plan);
+static void whorli_runs_fill_terms(whorl_action *action);
 
 /* Fills what is known before anything is allocated: sizes, modes, element type. */
 static whorl_status whorli_action_plan(whorl_host *host, const whorl_action_desc *desc, whorl_action *plan)
@@ -363,7 +396,9 @@ static whorl_status whorli_action_plan(whorl_host *host, const whorl_action_desc
                           "the operator is not real: choose complex elements, or rotate it with whorl_sum_real_gauge");
     plan->width = whorl_element_is_complex(plan->element) ? 2 : 1;
     plan->cut = whorli_action_cut(plan->sites);
+    plan->value_room = whorli_action_value_room(desc, plan->entry_count) * (uint64_t)plan->width;
     whorli_split_plan(desc, plan);
+    whorli_runs_plan(plan);
     return WHORL_OK;
 }
 
@@ -376,8 +411,9 @@ static whorl_action *whorli_action_carve(whorl_layout *layout, whorl_action *pla
     plan->terms = (whorli_action_real_term *)whorl_layout_carve(layout, reals, sizeof *plan->terms);
     plan->characters = (whorli_action_character *)whorl_layout_carve(layout, reals, sizeof *plan->characters);
     plan->flips = (whorli_action_flip *)whorl_layout_carve(layout, reals, sizeof *plan->flips);
-    plan->values = (double *)whorl_layout_carve(layout, whorl_size_multiply(reals, 4), sizeof *plan->values);
+    plan->values = (double *)whorl_layout_carve(layout, plan->value_room, sizeof *plan->values);
     whorli_split_carve(layout, plan);
+    whorli_runs_carve(layout, plan);
     return action;
 }
 
@@ -813,6 +849,8 @@ static void whorli_action_settle(whorl_action *action)
     whorli_action_fill_values(action);
     if (action->split.used)
         whorli_split_fill_terms(action);
+    if (action->runs.used && action->split.fits)
+        whorli_runs_fill_terms(action);
 }
 
 whorl_status whorl_action_reweight(whorl_host *host, whorl_action *action, const whorl_complex *weights)
@@ -1031,6 +1069,13 @@ static uint32_t whorli_split_need(const whorl_action *action, uint64_t high)
     return (uint32_t)key;
 }
 
+/* Double elements of all states: the kernel of runs needs no lists. */
+static int32_t whorli_runs_suit(const whorl_action *plan)
+{
+    return whorl_space_kind_of(plan->source) == WHORL_SPACE_ALL && !whorl_element_is_float(plan->element) &&
+           plan->cut + plan->width - 1 >= 3; /* rows of whole vectors */
+}
+
 /* Counts what the tables need, flip by flip of the structure, and decides whether the space is split. */
 static void whorli_split_plan(const whorl_action_desc *desc, whorl_action *plan)
 {
@@ -1045,7 +1090,7 @@ static void whorli_split_plan(const whorl_action_desc *desc, whorl_action *plan)
     split->highs = UINT64_C(1) << split->high_sites;
     split->group_rows = WHORLI_LANES / width;
     split->group_room = split->highs / split->group_rows + split->classes + 1;
-    split->pairs_room = 16 * ((uint64_t)split->low_sites + 1) * split->classes;
+    split->pairs_room = ((uint64_t)split->low_sites + 1) * split->classes << WHORLI_SIMPLE_RANK;
     split->pairs_room = split->pairs_room < split->lows ? split->pairs_room : split->lows;
     split->pair_room = split->lows + split->lows / 4; /* runs of pairs are at most an eighth, two entries each */
     for (k = 0; k < desc->sum_count; k++)
@@ -1061,6 +1106,8 @@ static void whorli_split_plan(const whorl_action_desc *desc, whorl_action *plan)
             else if (((x | z) & low) != 0)
                 split->list_room += width;
         }
+    if (whorli_runs_suit(plan))
+        split->near_room = split->list_room = 0;
     bytes =
         4 * split->near_room + split->list_room * (4 * split->pair_room + 20 * split->pairs_room + 4 * split->classes);
     split->used =
@@ -1287,7 +1334,7 @@ static void whorli_split_fill_terms(whorl_action *action)
     const whorli_action_flip *diagonal = whorli_action_diagonal(action);
     uint64_t g, low = whorl_bits_low(action->cut);
     split->fits = diagonal == NULL || diagonal->character_count <= WHORLI_SPLIT_CHARACTERS;
-    split->fits = split->fits && split->longest * (uint64_t)action->width <= 65536;
+    split->fits = split->fits && (action->runs.used || split->longest * (uint64_t)action->width <= 65536);
     split->first_far = action->flip_count;
     split->list_count = split->near_values = 0;
     split->has_odd = 0;
@@ -1305,7 +1352,7 @@ static void whorli_split_fill_terms(whorl_action *action)
         }
         if (split->first_far > g)
             split->first_far = g;
-        if ((flip->x & low) != 0 || whorli_split_basis_in(flip, low)) {
+        if (!action->runs.used && ((flip->x & low) != 0 || whorli_split_basis_in(flip, low))) {
             if (split->list_count == split->list_room) {
                 split->fits = 0;
                 return;
@@ -1313,11 +1360,13 @@ static void whorli_split_fill_terms(whorl_action *action)
             flip->list = (uint32_t)split->list_count++;
         }
     }
-    if (split->near_values > 65536)
+    if (split->near_values > 65536 && !action->runs.used)
         split->fits = 0;
     if (!split->fits)
         return;
     whorli_split_fill_diagonal(action);
+    if (action->runs.used)
+        return;
     whorli_split_fill_near(action);
     for (g = split->first_far; g < action->flip_count; g++)
         if (action->flips[g].list != UINT32_MAX)
@@ -1860,6 +1909,624 @@ static whorl_status whorli_split_apply(whorl_host *host, const whorli_action_job
     return status;
 }
 
+/* ---- >>runs ------------------------------------------------------------------------------------------------------
+ *
+ * All states, double elements. A vector of N sites, N + 1 bits for complex elements (bit 0: re or im), is cut into runs
+ * of 2^11 reals: 256 vectors of eight lanes. One run of y stays in the first-level cache while the flips are added to it
+ * one after the other; each reads one run of x, with vectors and lanes permuted by the middle and lowest bits of its
+ * mask. Where the factor does not depend on the lane only the vectors are visited on which it does not vanish: half of
+ * them for an exchange.
+ */
+
+#define WHORLI_RUN_BITS 11
+#define WHORLI_RUN_VECTORS 256
+
+typedef struct whorli_run_flip {
+    uint64_t high;          /* the run of x is that of y with these bits flipped */
+    uint32_t middle, lanes; /* flips of the vector and of the lane */
+    int32_t whole;          /* one factor for all of a run, in place: may wait for company */
+    int32_t plain;          /* the factor does not depend on the lane, lanes stay */
+    int32_t rank;
+    uint64_t basis[WHORLI_SIMPLE_RANK];
+    uint64_t first_value;
+    uint8_t order[WHORLI_RUN_VECTORS];   /* vectors by pattern of the middle bits */
+    uint8_t pattern[WHORLI_RUN_VECTORS]; /* that pattern */
+} whorli_run_flip;
+
+static void whorli_runs_plan(whorl_action *plan)
+{
+    int32_t bits = plan->sites + plan->width - 1;
+    plan->runs.used = plan->split.used && whorli_runs_suit(plan);
+    plan->runs.bits = bits;
+    plan->runs.run_bits = bits < WHORLI_RUN_BITS ? bits : WHORLI_RUN_BITS;
+    plan->runs.row_bits = plan->cut + plan->width - 1;
+}
+
+static void whorli_runs_carve(whorl_layout *layout, whorl_action *plan)
+{
+    whorli_runs *runs = &plan->runs;
+    uint64_t row = UINT64_C(1) << runs->row_bits, flips = whorl_size_multiply(plan->entry_count, (uint64_t)plan->width);
+    if (!runs->used)
+        return;
+    runs->flips = (whorli_run_flip *)whorl_layout_carve(layout, flips, sizeof *runs->flips);
+    runs->lane_values =
+        (double *)whorl_layout_carve(layout, whorl_size_multiply(plan->value_room, WHORLI_LANES), sizeof(double));
+    runs->diagonal = (double *)whorl_layout_carve(layout, row < WHORLI_LANES ? WHORLI_LANES : row, sizeof(double));
+    runs->signs = (uint64_t *)whorl_layout_carve(layout, row, sizeof(uint64_t));
+}
+
+static void whorli_runs_fill_flip(const whorl_action *action, const whorli_action_flip *flip, whorli_run_flip *to)
+{
+    const whorli_runs *runs = &action->runs;
+    int32_t shift = action->width - 1, k;
+    uint64_t x = flip->x << shift | flip->odd, run = whorl_bits_low(runs->run_bits), v, p, used = 0, l;
+    uint64_t vectors = UINT64_C(1) << (runs->run_bits - 3), basis = 0;
+    memset(to, 0, sizeof *to);
+    to->high = x & ~run;
+    to->middle = (uint32_t)((x & run) >> 3);
+    to->lanes = (uint32_t)(x & 7);
+    to->rank = flip->rank;
+    to->first_value = flip->first_value;
+    for (k = 0; k < flip->rank; k++) {
+        to->basis[k] = flip->basis[k] << shift;
+        basis |= to->basis[k];
+    }
+    to->plain = to->lanes == 0 && (basis & 7) == 0;
+    to->whole = to->plain && to->middle == 0 && (basis & run) == 0;
+    for (p = 0; p < UINT64_C(1) << flip->rank; p++) {
+        for (l = 0; l < WHORLI_LANES; l++) {
+            double f = action->values[flip->first_value + (p ^ whorli_action_pattern(flip, l >> shift))];
+            runs->lane_values[(flip->first_value + p) * WHORLI_LANES + l] = flip->odd && (l & 1) != 0 ? -f : f;
+        }
+        for (v = 0; v < vectors; v++)
+            if (whorli_action_pattern(flip, (v << 3) >> shift) == p) {
+                to->pattern[used] = (uint8_t)p;
+                to->order[used++] = (uint8_t)v;
+            }
+    }
+}
+
+/* What depends on the weighted terms; after the split has found that they fit. */
+static void whorli_runs_fill_terms(whorl_action *action)
+{
+    whorli_runs *runs = &action->runs;
+    const whorli_split *split = &action->split;
+    const whorli_action_flip *diagonal = whorli_action_diagonal(action);
+    uint64_t g, i, shift = (uint64_t)action->width - 1, row = UINT64_C(1) << runs->row_bits;
+    for (g = diagonal == NULL ? 0 : 1; g < action->flip_count; g++)
+        whorli_runs_fill_flip(action, action->flips + g, runs->flips + g);
+    for (i = 0; diagonal != NULL && i < row; i++) {
+        runs->diagonal[i] = split->diagonal[i >> shift];
+        if ((i & 7) == 0)
+            runs->signs[i >> 3] = split->signs[i >> shift];
+    }
+}
+
+/*
+ * The four loops, in plain C and with vector types of exactly the machine's width. `first` counts vectors of a row.
+ *     diagonal: y = 0 + f x for `count` vectors
+ *     lanes:    y_v += f x_(v ^ middle) with a vector of factors, lanes exchanged
+ *     plain:    the same with one factor a pattern, lanes in place, nothing where it vanishes
+ *     whole:    y += f[0] x[0] + ... up to four runs, one after the other
+ */
+typedef struct whorli_runs_loops {
+    void (*diagonal)(const whorli_runs *runs, uint64_t first, uint64_t count, const double *characters,
+                     uint64_t character_count, const double *x, double *y);
+    void (*lanes)(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned, const double *values, const double *x,
+                  double *y);
+    void (*plain)(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned, const double *values, const double *x,
+                  double *y);
+    void (*whole)(double *y, const double *const *x, const double *f, int32_t count, uint64_t reals);
+} whorli_runs_loops;
+
+static void whorli_runs_diagonal_plain(const whorli_runs *runs, uint64_t first, uint64_t count,
+                                       const double *characters, uint64_t character_count, const double *x, double *y)
+{
+    uint64_t v, l, j;
+    for (v = 0; v < count; v++) {
+        double f[WHORLI_LANES];
+        uint64_t signs = runs->signs[first + v];
+        for (l = 0; l < WHORLI_LANES; l++)
+            f[l] = runs->diagonal[(first + v) * WHORLI_LANES + l];
+        for (j = 0; j < character_count; j++, signs >>= 1) {
+            const double *e = characters + (2 * j + (signs & 1)) * WHORLI_LANES;
+            for (l = 0; l < WHORLI_LANES; l++)
+                f[l] += e[l];
+        }
+        for (l = 0; l < WHORLI_LANES; l++)
+            y[v * WHORLI_LANES + l] = 0.0 + f[l] * x[v * WHORLI_LANES + l];
+    }
+}
+
+static void whorli_runs_lanes_plain(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned,
+                                    const double *values, const double *x, double *y)
+{
+    uint64_t i, l, lanes = flip->lanes;
+    for (i = 0; i < vectors; i++) {
+        uint64_t v = flip->order[i];
+        const double *f = values + (flip->pattern[i] ^ turned) * WHORLI_LANES;
+        const double *from = x + (v ^ flip->middle) * WHORLI_LANES;
+        double *to = y + v * WHORLI_LANES, turn[WHORLI_LANES];
+        for (l = 0; l < WHORLI_LANES; l++)
+            turn[l] = from[l ^ lanes];
+        for (l = 0; l < WHORLI_LANES; l++)
+            to[l] += f[l] * turn[l];
+    }
+}
+
+static void whorli_runs_plain_plain(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned,
+                                    const double *values, const double *WHORLI_RESTRICT x, double *WHORLI_RESTRICT y)
+{
+    uint64_t i = 0, l;
+    while (i < vectors) {
+        uint64_t pattern = flip->pattern[i];
+        double f = values[pattern ^ turned];
+        for (; i < vectors && flip->pattern[i] == pattern; i++) {
+            const double *from = x + (uint64_t)(flip->order[i] ^ flip->middle) * WHORLI_LANES;
+            double *to = y + (uint64_t)flip->order[i] * WHORLI_LANES;
+            if (f != 0.0)
+                for (l = 0; l < WHORLI_LANES; l++)
+                    to[l] += f * from[l];
+        }
+    }
+}
+
+#if WHORLI_SHUFFLES
+
+WHORLI_TARGET_AVX2 static inline __attribute__((always_inline)) whorli_double4 whorli_load_avx2(const double *from)
+{
+    whorli_double4 a;
+    memcpy(&a, from, sizeof a);
+    return a;
+}
+
+/* Lanes exchanged within one vector: lane l takes l ^ lanes. */
+WHORLI_TARGET_AVX2 static inline __attribute__((always_inline)) whorli_double4
+whorli_exchange_avx2(whorli_double4 a, const uint64_t lanes)
+{
+    switch (lanes) {
+    case 1:
+        return __builtin_shufflevector(a, a, 1, 0, 3, 2);
+    case 2:
+        return __builtin_shufflevector(a, a, 2, 3, 0, 1);
+    case 3:
+        return __builtin_shufflevector(a, a, 3, 2, 1, 0);
+    default:
+        return a;
+    }
+}
+
+WHORLI_TARGET_AVX2 static inline __attribute__((always_inline)) void
+whorli_runs_exchanged_avx2(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned, const double *values,
+                           const double *x, double *y, const uint64_t lanes)
+{
+    uint64_t i;
+    for (i = 0; i < vectors; i++) {
+        uint64_t v = flip->order[i], part;
+        const double *f = values + (flip->pattern[i] ^ turned) * WHORLI_LANES;
+        const double *from = x + (v ^ flip->middle) * WHORLI_LANES;
+        double *to = y + v * WHORLI_LANES;
+        for (part = 0; part < 2; part++) {
+            whorli_double4 a = whorli_load_avx2(from + 4 * (part ^ (lanes / 4)));
+            whorli_double4 sum =
+                whorli_load_avx2(to + 4 * part) + whorli_load_avx2(f + 4 * part) * whorli_exchange_avx2(a, lanes % 4);
+            memcpy(to + 4 * part, &sum, sizeof sum);
+        }
+    }
+}
+
+WHORLI_TARGET_AVX2 static void whorli_runs_lanes_avx2(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned,
+                                                      const double *values, const double *x, double *y)
+{
+    switch (flip->lanes) {
+    case 0:
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 0);
+        break;
+    case 1:
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 1);
+        break;
+    case 2:
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 2);
+        break;
+    case 3:
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 3);
+        break;
+    case 4:
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 4);
+        break;
+    case 5:
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 5);
+        break;
+    case 6:
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 6);
+        break;
+    default:
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 7);
+        break;
+    }
+}
+
+WHORLI_TARGET_AVX2 static void whorli_runs_plain_avx2(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned,
+                                                      const double *values, const double *x, double *y)
+{
+    uint64_t i = 0, part;
+    while (i < vectors) {
+        uint64_t pattern = flip->pattern[i];
+        double value = values[pattern ^ turned];
+        whorli_double4 f = {0.0};
+        if (value == 0.0) {
+            while (i < vectors && flip->pattern[i] == pattern)
+                i++;
+            continue;
+        }
+        f = f + value;
+        for (; i < vectors && flip->pattern[i] == pattern; i++) {
+            const double *from = x + (uint64_t)(flip->order[i] ^ flip->middle) * WHORLI_LANES;
+            double *to = y + (uint64_t)flip->order[i] * WHORLI_LANES;
+            for (part = 0; part < 8; part += 4) {
+                whorli_double4 sum = whorli_load_avx2(to + part) + f * whorli_load_avx2(from + part);
+                memcpy(to + part, &sum, sizeof sum);
+            }
+        }
+    }
+}
+
+WHORLI_TARGET_AVX2 static void whorli_runs_diagonal_avx2(const whorli_runs *runs, uint64_t first, uint64_t count,
+                                                         const double *characters, uint64_t character_count,
+                                                         const double *x, double *y)
+{
+    uint64_t v, j, part;
+    for (v = 0; v < count; v++)
+        for (part = 0; part < 8; part += 4) {
+            whorli_double4 f = whorli_load_avx2(runs->diagonal + (first + v) * WHORLI_LANES + part), zero = {0.0};
+            uint64_t signs = runs->signs[first + v];
+            for (j = 0; j < character_count; j++, signs >>= 1)
+                f += whorli_load_avx2(characters + (2 * j + (signs & 1)) * WHORLI_LANES + part);
+            f = zero + f * whorli_load_avx2(x + v * WHORLI_LANES + part);
+            memcpy(y + v * WHORLI_LANES + part, &f, sizeof f);
+        }
+}
+
+WHORLI_TARGET_AVX512 static inline __attribute__((always_inline)) whorli_double8 whorli_load_avx512(const double *from)
+{
+    whorli_double8 a;
+    memcpy(&a, from, sizeof a);
+    return a;
+}
+
+/* Lanes exchanged within one vector: lane l takes l ^ lanes. */
+WHORLI_TARGET_AVX512 static inline __attribute__((always_inline)) whorli_double8
+whorli_exchange_avx512(whorli_double8 a, const uint64_t lanes)
+{
+    switch (lanes) {
+    case 1:
+        return __builtin_shufflevector(a, a, 1, 0, 3, 2, 5, 4, 7, 6);
+    case 2:
+        return __builtin_shufflevector(a, a, 2, 3, 0, 1, 6, 7, 4, 5);
+    case 3:
+        return __builtin_shufflevector(a, a, 3, 2, 1, 0, 7, 6, 5, 4);
+    case 4:
+        return __builtin_shufflevector(a, a, 4, 5, 6, 7, 0, 1, 2, 3);
+    case 5:
+        return __builtin_shufflevector(a, a, 5, 4, 7, 6, 1, 0, 3, 2);
+    case 6:
+        return __builtin_shufflevector(a, a, 6, 7, 4, 5, 2, 3, 0, 1);
+    case 7:
+        return __builtin_shufflevector(a, a, 7, 6, 5, 4, 3, 2, 1, 0);
+    default:
+        return a;
+    }
+}
+
+WHORLI_TARGET_AVX512 static inline __attribute__((always_inline)) void
+whorli_runs_exchanged_avx512(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned, const double *values,
+                             const double *x, double *y, const uint64_t lanes)
+{
+    uint64_t i;
+    for (i = 0; i < vectors; i++) {
+        uint64_t v = flip->order[i], part;
+        const double *f = values + (flip->pattern[i] ^ turned) * WHORLI_LANES;
+        const double *from = x + (v ^ flip->middle) * WHORLI_LANES;
+        double *to = y + v * WHORLI_LANES;
+        for (part = 0; part < 1; part++) {
+            whorli_double8 a = whorli_load_avx512(from + 8 * (part ^ (lanes / 8)));
+            whorli_double8 sum = whorli_load_avx512(to + 8 * part) +
+                                 whorli_load_avx512(f + 8 * part) * whorli_exchange_avx512(a, lanes % 8);
+            memcpy(to + 8 * part, &sum, sizeof sum);
+        }
+    }
+}
+
+WHORLI_TARGET_AVX512 static void whorli_runs_lanes_avx512(const whorli_run_flip *flip, uint64_t vectors,
+                                                          uint64_t turned, const double *values, const double *x,
+                                                          double *y)
+{
+    switch (flip->lanes) {
+    case 0:
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 0);
+        break;
+    case 1:
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 1);
+        break;
+    case 2:
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 2);
+        break;
+    case 3:
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 3);
+        break;
+    case 4:
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 4);
+        break;
+    case 5:
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 5);
+        break;
+    case 6:
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 6);
+        break;
+    default:
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 7);
+        break;
+    }
+}
+
+WHORLI_TARGET_AVX512 static void whorli_runs_plain_avx512(const whorli_run_flip *flip, uint64_t vectors,
+                                                          uint64_t turned, const double *values, const double *x,
+                                                          double *y)
+{
+    uint64_t i = 0, part;
+    while (i < vectors) {
+        uint64_t pattern = flip->pattern[i];
+        double value = values[pattern ^ turned];
+        whorli_double8 f = {0.0};
+        if (value == 0.0) {
+            while (i < vectors && flip->pattern[i] == pattern)
+                i++;
+            continue;
+        }
+        f = f + value;
+        for (; i < vectors && flip->pattern[i] == pattern; i++) {
+            const double *from = x + (uint64_t)(flip->order[i] ^ flip->middle) * WHORLI_LANES;
+            double *to = y + (uint64_t)flip->order[i] * WHORLI_LANES;
+            for (part = 0; part < 8; part += 8) {
+                whorli_double8 sum = whorli_load_avx512(to + part) + f * whorli_load_avx512(from + part);
+                memcpy(to + part, &sum, sizeof sum);
+            }
+        }
+    }
+}
+
+WHORLI_TARGET_AVX512 static void whorli_runs_diagonal_avx512(const whorli_runs *runs, uint64_t first, uint64_t count,
+                                                             const double *characters, uint64_t character_count,
+                                                             const double *x, double *y)
+{
+    uint64_t v, j, part;
+    for (v = 0; v < count; v++)
+        for (part = 0; part < 8; part += 8) {
+            whorli_double8 f = whorli_load_avx512(runs->diagonal + (first + v) * WHORLI_LANES + part), zero = {0.0};
+            uint64_t signs = runs->signs[first + v];
+            for (j = 0; j < character_count; j++, signs >>= 1)
+                f += whorli_load_avx512(characters + (2 * j + (signs & 1)) * WHORLI_LANES + part);
+            f = zero + f * whorli_load_avx512(x + v * WHORLI_LANES + part);
+            memcpy(y + v * WHORLI_LANES + part, &f, sizeof f);
+        }
+}
+#endif
+
+static whorli_runs_loops whorli_runs_choose(void)
+{
+    whorli_runs_loops loops;
+    loops.diagonal = whorli_runs_diagonal_plain;
+    loops.lanes = whorli_runs_lanes_plain;
+    loops.plain = whorli_runs_plain_plain;
+    loops.whole = whorli_split_far_plain;
+#if WHORLI_SHUFFLES
+    if (whorli_target() == 2) {
+        loops.diagonal = whorli_runs_diagonal_avx512;
+        loops.lanes = whorli_runs_lanes_avx512;
+        loops.plain = whorli_runs_plain_avx512;
+        loops.whole = whorli_split_far_avx512;
+    } else if (whorli_target() == 1) {
+        loops.diagonal = whorli_runs_diagonal_avx2;
+        loops.lanes = whorli_runs_lanes_avx2;
+        loops.plain = whorli_runs_plain_avx2;
+        loops.whole = whorli_split_far_avx2;
+    }
+#endif
+    return loops;
+}
+
+typedef struct whorli_runs_job {
+    const whorl_action *action;
+    const double *x;
+    double *y;
+    uint64_t block_bits; /* reals of a block of work */
+    uint64_t reals;      /* of a column */
+    int32_t count;
+    int32_t step; /* y = a A x + b y, and dots of it */
+    double a, b;
+    whorl_complex *parts;
+    whorli_runs_loops loops;
+} whorli_runs_job;
+
+/* The flips of one run, whole runs up to four at a time. */
+static void whorli_runs_flips(const whorl_action *action, const whorli_runs_loops *loops, uint64_t base,
+                              const double *x, double *y)
+{
+    const whorli_runs *runs = &action->runs;
+    uint64_t g = whorli_action_diagonal(action) == NULL ? 0 : 1, reals = UINT64_C(1) << runs->run_bits;
+    uint64_t vectors = reals >> 3;
+    const double *waiting[4] = {NULL, NULL, NULL, NULL};
+    double f[4] = {0.0, 0.0, 0.0, 0.0};
+    int32_t count = 0, k;
+    for (; g < action->flip_count; g++) {
+        const whorli_run_flip *flip = runs->flips + g;
+        const double *from = x + (base ^ flip->high), *values = action->values + flip->first_value;
+        uint64_t turned = 0;
+        for (k = 0; k < flip->rank; k++)
+            turned |= (uint64_t)whorl_bits_parity(flip->basis[k] & base) << k;
+        if (flip->whole) {
+            if (values[turned] == 0.0)
+                continue;
+            waiting[count] = from;
+            f[count++] = values[turned];
+            if (count == 4) {
+                loops->whole(y, waiting, f, 4, reals);
+                count = 0;
+            }
+            continue;
+        }
+        if (count > 0)
+            loops->whole(y, waiting, f, count, reals);
+        count = 0;
+        if (flip->plain)
+            loops->plain(flip, vectors, turned, values, from, y);
+        else
+            loops->lanes(flip, vectors, turned, runs->lane_values + flip->first_value * WHORLI_LANES, from, y);
+    }
+    if (count > 0)
+        loops->whole(y, waiting, f, count, reals);
+}
+
+/* Characters of the diagonal for the row that holds `base`: for each lane, with both signs of the rest of the low part.
+ */
+static void whorli_runs_characters(const whorl_action *action, uint64_t base, double *characters)
+{
+    const whorli_action_flip *diagonal = whorli_action_diagonal(action);
+    uint64_t j, i, l, shift = (uint64_t)action->width - 1, high = base >> shift;
+    for (j = 0; j < diagonal->character_count; j++) {
+        const whorli_action_character *character = action->characters + diagonal->first_character + j;
+        double e = 0.0;
+        for (i = character->first; i < character->first + character->count; i++)
+            e += whorl_bits_parity(action->terms[i].high & high) ? -action->terms[i].d : action->terms[i].d;
+        for (l = 0; l < WHORLI_LANES; l++) {
+            double lane = whorl_bits_parity(character->low & (l >> shift)) ? -e : e;
+            characters[2 * j * WHORLI_LANES + l] = lane;
+            characters[(2 * j + 1) * WHORLI_LANES + l] = -lane;
+        }
+    }
+}
+
+/* Leaves of a block and their sums: blocks are powers of two of leaves, or the whole vector. */
+static void whorli_runs_dots(const whorli_runs_job *job, uint64_t base, uint64_t reals, uint64_t block)
+{
+    whorl_element element = job->action->element;
+    uint64_t leaf = WHORL_LEAF * (uint64_t)job->action->width, i, width = (uint64_t)job->action->width;
+    whorl_tree across, square;
+    whorl_tree_clear(&across);
+    whorl_tree_clear(&square);
+    for (i = 0; i < reals; i += leaf) {
+        uint64_t count = (reals - i < leaf ? reals - i : leaf) / width;
+        whorl_tree_add(&across, whorl_leaf_dot(element, job->x + base + i, job->y + base + i, count));
+        whorl_tree_add(&square, whorl_leaf_dot(element, job->y + base + i, job->y + base + i, count));
+    }
+    job->parts[2 * block] = whorl_tree_total(&across);
+    job->parts[2 * block + 1] = whorl_tree_total(&square);
+}
+
+static void whorli_runs_block(void *argument, uint64_t block, int32_t worker)
+{
+    const whorli_runs_job *job = (const whorli_runs_job *)argument;
+    const whorl_action *action = job->action;
+    const whorli_runs *runs = &action->runs;
+    const whorli_action_flip *diagonal = whorli_action_diagonal(action);
+    uint64_t run = UINT64_C(1) << runs->run_bits, row = UINT64_C(1) << runs->row_bits,
+             size = UINT64_C(1) << job->block_bits;
+    uint64_t base, i, part = row < run ? row : run;
+    double characters[2 * WHORLI_SPLIT_CHARACTERS * WHORLI_LANES], sums[1 << WHORLI_RUN_BITS];
+    int32_t c;
+    (void)worker;
+    for (c = 0; c < job->count; c++) {
+        const double *x = job->x + (uint64_t)c * job->reals;
+        double *y = job->y + (uint64_t)c * job->reals;
+        for (base = block * size; base < (block + 1) * size; base += run) {
+            double *to = job->step ? sums : y + base;
+            for (i = 0; i < run; i += part) {
+                if (diagonal == NULL) {
+                    uint64_t k;
+                    for (k = 0; k < part; k++)
+                        to[i + k] = 0.0;
+                    continue;
+                }
+                if (((base + i) & (row - 1)) == 0)
+                    whorli_runs_characters(action, base + i, characters);
+                job->loops.diagonal(runs, ((base + i) & (row - 1)) >> 3, part >> 3, characters,
+                                    diagonal->character_count, x + base + i, to + i);
+            }
+            whorli_runs_flips(action, &job->loops, base, x, to);
+            if (job->step && job->b == 0.0)
+                for (i = 0; i < run; i++)
+                    y[base + i] = job->a * sums[i];
+            else if (job->step)
+                for (i = 0; i < run; i++)
+                    y[base + i] = job->a * sums[i] + job->b * y[base + i];
+        }
+    }
+    if (job->step)
+        whorli_runs_dots(job, block * size, size, block);
+}
+
+/* A block is at least a row, so that its characters are computed once. */
+static int32_t whorli_runs_block_bits(const whorl_action *action)
+{
+    const whorli_runs *runs = &action->runs;
+    int32_t bits = runs->row_bits > 13 ? runs->row_bits : 13;
+    return bits < runs->bits ? bits : runs->bits;
+}
+
+static whorl_status whorli_runs_run(whorl_host *host, whorli_runs_job *job)
+{
+    const whorl_action *action = job->action;
+    job->loops = whorli_runs_choose();
+    job->block_bits = (uint64_t)whorli_runs_block_bits(action);
+    job->reals = UINT64_C(1) << action->runs.bits;
+    return whorl_run(host, whorli_runs_block, job, job->reals >> job->block_bits,
+                     whorl_size_multiply((action->flip_count + 1) << job->block_bits, (uint64_t)job->count));
+}
+
+static whorl_status whorli_runs_apply(whorl_host *host, const whorli_action_job *given)
+{
+    whorli_runs_job job;
+    memset(&job, 0, sizeof job);
+    job.action = given->action;
+    job.x = (const double *)(const void *)given->x;
+    job.y = (double *)(void *)given->y;
+    job.count = given->count;
+    return whorli_runs_run(host, &job);
+}
+
+static uint64_t whorli_runs_parts_bytes(const whorl_action *action)
+{
+    return (UINT64_C(2) << (action->runs.bits - whorli_runs_block_bits(action))) * sizeof(whorl_complex);
+}
+
+static whorl_status whorli_runs_step(whorl_host *host, const whorl_map *map, double a, const void *x, double b, void *y,
+                                     whorl_complex dots[2])
+{
+    const whorl_action *action = (const whorl_action *)map->context;
+    whorl_block block;
+    whorli_runs_job job;
+    whorl_status status = whorl_block_take(host, whorli_runs_parts_bytes(action), &block);
+    if (status != WHORL_OK)
+        return status;
+    memset(&job, 0, sizeof job);
+    job.action = action;
+    job.x = (const double *)x;
+    job.y = (double *)y;
+    job.count = 1;
+    job.step = 1;
+    job.a = a;
+    job.b = b;
+    job.parts = (whorl_complex *)(void *)block.at;
+    status = whorli_runs_run(host, &job);
+    if (status == WHORL_OK) {
+        uint64_t blocks = job.reals >> job.block_bits;
+        dots[0] = whorli_vector_total(job.parts, blocks, 2);
+        dots[1] = whorli_vector_total(job.parts + 1, blocks, 2);
+    }
+    whorl_block_give(host, &block);
+    return status;
+}
+
 /* ---- >>map ------------------------------------------------------------------------------------------------------- */
 
 static whorl_status whorli_action_apply(whorl_host *host, const whorl_map *map, const void *x, void *y, int32_t count)
@@ -1872,6 +2539,8 @@ static whorl_status whorli_action_apply(whorl_host *host, const whorl_map *map, 
     job.columns_of_x = map->columns;
     job.rows = map->rows;
     job.count = count;
+    if (action->runs.used && action->split.fits)
+        return whorli_runs_apply(host, &job);
     if (action->split.used && action->split.fits)
         return whorli_split_apply(host, &job);
     job.block = 1024;
@@ -1884,7 +2553,8 @@ static uint64_t whorli_action_scratch(const whorl_host *host, const whorl_map *m
     const whorl_action *action = (const whorl_action *)map->context;
     whorl_layout layout = {NULL, 0};
     whorli_split_scratch scratch;
-    (void)count;
+    if (action->runs.used && action->split.fits)
+        return count == 0 ? whorl_block_bytes(whorli_runs_parts_bytes(action)) : 0;
     if (!action->split.used || !action->split.fits || map->rows == 0)
         return 0;
     whorli_split_carve_scratch(&layout, action, whorl_workers(host), &scratch);
@@ -1902,12 +2572,16 @@ whorl_map whorl_action_map(const whorl_action *action)
     map.context = action;
     map.apply = whorli_action_apply;
     map.scratch = whorli_action_scratch;
+    if (action->runs.used && action->split.fits)
+        map.step = whorli_runs_step;
     return map;
 }
 
 const char *whorl_action_kernel(const whorl_action *action)
 {
-    return action->split.used && action->split.fits ? "rows of eight" : "state by state";
+    if (!action->split.used || !action->split.fits)
+        return "state by state";
+    return action->runs.used ? "runs" : "rows of eight";
 }
 
 WHORLI_ARITHMETIC_END
