@@ -12,7 +12,7 @@
 #define BENCH_INCLUDED
 
 #ifndef _POSIX_C_SOURCE
-#define _POSIX_C_SOURCE 199309L
+#define _POSIX_C_SOURCE 200112L
 #endif
 #include <math.h>
 #include <stdio.h>

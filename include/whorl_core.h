@@ -1582,10 +1582,22 @@ int32_t whorl_arithmetic(void)
     volatile double big = 1e300, ten = 10.0;
     double a = one + 1024.0 * 1024.0 * 32.0 * epsilon, sum, back, quotient; /* 1 + 2^-27: its square does not fit 53 bits */
     int32_t flags = 0, i;
-    double vector[8], total = 0.0;
+    double vector[8], total = 0.0, x[16], y[16], product[16];
     sum = a * a - (one + 2.0 * (a - one));
     if (sum != 0.0)
         flags |= WHORL_ARITHMETIC_CONTRACTS;
+    for (i = 0; i < 8; i++) { /* pairs of products: some compilers fuse these although they keep single ones apart */
+        x[2 * i] = y[2 * i] = a;
+        x[2 * i + 1] = one;
+        y[2 * i + 1] = one + 2.0 * (a - one);
+    }
+    for (i = 0; i < 8; i++) {
+        product[2 * i] = x[2 * i] * y[2 * i] - x[2 * i + 1] * y[2 * i + 1];
+        product[2 * i + 1] = x[2 * i] * y[2 * i + 1] + x[2 * i + 1] * y[2 * i];
+    }
+    for (i = 0; i < 8; i++)
+        if (product[2 * i] != 0.0)
+            flags |= WHORL_ARITHMETIC_CONTRACTS;
     back = (one + tiny) - one; /* tiny vanishes in the first sum */
     if (back != 0.0)
         flags |= WHORL_ARITHMETIC_REASSOCIATES;
