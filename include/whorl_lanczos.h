@@ -5,19 +5,20 @@
  *     whorl_lanczos *solver;
  *     status = whorl_lanczos_make(&host, &map, &want, &solver);
  *     status = whorl_lanczos_advance(&host, &map, solver, 0);     to the end; or a budget of products at a time
- *     ... whorl_lanczos_value(solver, k), _residual(solver, k), _vector(solver, k) for k < whorl_lanczos_count(solver) ...
+ *     for k < whorl_lanczos_count(solver): whorl_lanczos_value(solver, k), _residual(solver, k), _vector(solver, k)
  *     whorl_lanczos_free(&host, solver);
  *
- * Method: thick-restart Lanczos (Wu and Simon, SIAM J. Matrix Anal. Appl. 22, 602 (2000)) with every new vector
- * orthogonalised against the whole basis, a second time where the first took much away (Daniel, Gragg, Kaufman and
- * Stewart, Math. Comp. 30, 772 (1976)), so that no copy of a level appears that is not there. A pair is accepted when
- * ||A v - value v||, computed by a product made for it, is at most tolerance times the norm estimate (the largest
- * ||A v|| and |Ritz value| seen: a lower bound of ||A||, so the test errs on the strict side). Accepted vectors are kept
- * out of all later work.
+ * Method: thick-restart Lanczos (Wu and Simon, SIAM J. Matrix Anal. Appl. 22, 602 (2000)) with partial
+ * reorthogonalisation (Simon, Math. Comp. 42, 115 (1984)): a recurrence follows the overlaps of the basis vectors, and
+ * before they exceed a hundredth of the tolerance a vector and the next one are orthogonalised against the whole basis,
+ * a second time where the first took much away. Accepted vectors are taken out of every new one. So no copy of a level
+ * appears that is not there. A pair is accepted when ||A v - value v||, computed by a product made for it, is at most
+ * tolerance times the norm estimate (the largest ||A v|| and |Ritz value| seen: a lower bound of ||A||, so the test
+ * errs on the strict side). Accepted vectors are kept out of all later work.
  *
  * A Krylov space shows each degenerate level once. So when all wanted pairs are there, fresh random starts in the
- * complement of what was found follow, until one finds nothing beyond the list; what they find goes into it. Multiplicity is
- * thus counted in vectors. That the last start found nothing is a probabilistic check, not a proof, and
+ * complement of what was found follow, until one finds nothing beyond the list; what they find goes into it.
+ * Multiplicity is thus counted in vectors. That the last start found nothing is a probabilistic check, not a proof, and
  * whorl_lanczos_checked tells that it was made.
  *
  * The lean form keeps three vectors and goes through the recurrence twice (Cullum and Willoughby, Lanczos Algorithms,
@@ -73,25 +74,26 @@ typedef struct whorl_lanczos whorl_lanczos;
 WHORL_API whorl_lanczos_desc whorl_lanczos_default(void);
 
 /*
- * The bytes that a solve takes from the host, exactly: the solver and the largest block that advance takes beside it. Under
- * a byte limit the window is made smaller until the solve fits, then one wanted pair is found by the lean form; this is
- * decided here and in make alike, from desc, map and the room under the limit. Takes nothing. Errors: as make.
+ * The bytes that a solve takes from the host, exactly: the solver and the largest block that advance takes beside it.
+ * Under a byte limit the window is made smaller until the solve fits, then one wanted pair is found by the lean form;
+ * this is decided here and in make alike, from desc, map and the room under the limit. Takes nothing. Errors: as make.
  */
 WHORL_API whorl_status whorl_lanczos_bytes(whorl_host *host, const whorl_map *map, const whorl_lanczos_desc *desc,
                                            uint64_t *bytes);
 /*
- * Makes a solver; nothing is applied yet. desc NULL: defaults. The caller frees it with whorl_lanczos_free.
- * Errors, *solver is then NULL: WHORL_BAD_ARGUMENT, WHORL_NOT_HERMITIAN (map->hermitian is not set), WHORL_NOT_FINITE (start),
+ * Makes a solver; nothing is applied yet. desc NULL: defaults. The caller frees it with whorl_lanczos_free. Errors,
+ * *solver is then NULL: WHORL_BAD_ARGUMENT, WHORL_NOT_HERMITIAN (map->hermitian is not set), WHORL_NOT_FINITE (start),
  * WHORL_TOO_LARGE, WHORL_OVER_LIMIT (says what would be enough), WHORL_NO_MEMORY, WHORL_CANCELLED.
  */
 WHORL_API whorl_status whorl_lanczos_make(whorl_host *host, const whorl_map *map, const whorl_lanczos_desc *desc,
                                           whorl_lanczos **solver);
 /*
- * Goes on for about `products` products (0: to the end). Cost of one: the product, and 2 n (window + wanted) multiplications
- * for orthogonality. Returns WHORL_OK when done, WHORL_UNFINISHED when the budget is used up, WHORL_NOT_CONVERGED when
- * most_products is reached (what was accepted is there). Errors: WHORL_BAD_ARGUMENT (another map than that of make),
- * WHORL_NOT_FINITE (a product gave NaN, infinity, or numbers beyond 1e150, whose squares overflow), WHORL_CANCELLED (call again: the same bits), those of the map, those of
- * memory.
+ * Goes on for about `products` products (0: to the end). Cost of one: the product, and from 2 n (wanted + 8) to 2 n
+ * (window + wanted) multiplications for orthogonality, as the drift demands. Returns WHORL_OK when done,
+ * WHORL_UNFINISHED when the budget is used up, WHORL_NOT_CONVERGED when most_products is reached (what was accepted is
+ * there). Errors: WHORL_BAD_ARGUMENT (another map than that of make), WHORL_NOT_FINITE (a product gave NaN, infinity,
+ * or numbers beyond 1e150, whose squares overflow), WHORL_CANCELLED (call again: the same bits), those of the map,
+ * those of memory.
  */
 WHORL_API whorl_status whorl_lanczos_advance(whorl_host *host, const whorl_map *map, whorl_lanczos *solver,
                                              uint64_t products);
@@ -118,9 +120,9 @@ WHORL_API int32_t whorl_lanczos_is_lean(const whorl_lanczos *solver);
 WHORL_API int32_t whorl_lanczos_window(const whorl_lanczos *solver);
 
 /*
- * The whole state: *bytes bytes owned by the solver, good until it advances or is freed. A copy is a checkpoint, for the same
- * machine type. whorl_lanczos_resume makes a solver from a copy: going on gives the same bits as if nothing had happened.
- * Errors: WHORL_BAD_ARGUMENT (not a state, or of another map), those of memory.
+ * The whole state: *bytes bytes owned by the solver, good until it advances or is freed. A copy is a checkpoint, for
+ * the same machine type. whorl_lanczos_resume makes a solver from a copy: going on gives the same bits as if nothing
+ * had happened. Errors: WHORL_BAD_ARGUMENT (not a state, or of another map), those of memory.
  */
 WHORL_API const void *whorl_lanczos_state(const whorl_lanczos *solver, uint64_t *bytes);
 WHORL_API whorl_status whorl_lanczos_resume(whorl_host *host, const whorl_map *map, const void *state, uint64_t bytes,
@@ -130,7 +132,7 @@ WHORLI_ARITHMETIC_END
 WHORLI_C_END
 #endif /* WHORL_LANCZOS_INCLUDED */
 
-/* ==== implementation ================================================================================================== */
+/* ==== implementation ============================================================================================== */
 #if defined(WHORL_IMPLEMENTATION) && !defined(WHORL_LANCZOS_IMPLEMENTED)
 #define WHORL_LANCZOS_IMPLEMENTED
 
@@ -140,7 +142,7 @@ WHORLI_C_END
 WHORLI_C_BEGIN
 WHORLI_ARITHMETIC_BEGIN
 
-/* ---- >>state --------------------------------------------------------------------------------------------------------- */
+/* ---- >>state ----------------------------------------------------------------------------------------------------- */
 
 enum {
     WHORLI_LANCZOS_START = 0, /* a new Krylov space, or a new cycle of the lean form */
@@ -151,18 +153,20 @@ enum {
     WHORLI_LANCZOS_DONE
 };
 #define WHORLI_LANCZOS_MAGIC UINT64_C(0x77686f726c6c7a31)
+#define WHORLI_LANCZOS_DRIFT 1e-2 /* of the tolerance: overlaps that basis vectors may have */
 #define WHORLI_LEAN_STEPS 300 /* of the lean form between its two passes */
 
 /*
  * Everything that a resumed run needs, without pointers: places are byte offsets from this struct. Columns: `wanted`
- * places for accepted vectors, filled from the right end, then the basis, so that both are contiguous; window + 1 of these.
- * Values are those of sign * A, so that the wanted end is always the lowest.
+ * places for accepted vectors, filled from the right end, then the basis, so that both are contiguous; window + 1 of
+ * these. Values are those of sign * A, so that the wanted end is always the lowest.
  */
 typedef struct whorli_lanczos_state {
     uint64_t magic, bytes, n, seed, most_products, products, run;
     uint64_t column_bytes;
-    uint64_t at_value, at_residual, at_order, at_projected, at_rotation, at_ritz, at_columns;
+    uint64_t at_value, at_residual, at_order, at_projected, at_rotation, at_ritz, at_drift, at_columns;
     double tolerance, sign, norm, beta;
+    double drift_limit; /* loss of orthogonality at which a vector is cleaned against the whole basis; 0: always */
     double strict; /* of the tolerance: what the recurrence must promise before a product is spent on a residual */
     whorl_element element;
     int32_t wanted, window, lean, unchecked, given_start;
@@ -175,6 +179,10 @@ typedef struct whorli_lanczos_state {
     int32_t shown;     /* Ritz values of the last look */
     int32_t exhausted; /* basis and accepted vectors span everything */
     int32_t checked, cut;
+    int32_t clean;     /* the next vector is cleaned at any drift: two in a row, as the recurrence has two terms */
+    int32_t polished;  /* leading Ritz vectors made orthonormal to working accuracy */
+    int32_t refuted;   /* a product did not confirm Ritz vector number `verify` */
+    int32_t again;     /* the next space begins with column 0 of the basis */
     int32_t step;      /* lean: of either pass */
 } whorli_lanczos_state;
 
@@ -186,7 +194,7 @@ struct whorl_lanczos {
 typedef struct whorli_lanczos_parts {
     whorl_lanczos *solver;
     whorli_lanczos_state *state;
-    double *value, *residual, *projected, *rotation, *ritz;
+    double *value, *residual, *projected, *rotation, *ritz, *drift;
     int32_t *order;
     char *columns;
 } whorli_lanczos_parts;
@@ -225,6 +233,7 @@ static void whorli_lanczos_carve(whorl_layout *layout, const whorli_lanczos_stat
     parts->projected = (double *)whorl_layout_carve(layout, plan->lean ? 2 * m : m * m, 8);
     parts->rotation = (double *)whorl_layout_carve(layout, m * m, 8);
     parts->ritz = (double *)whorl_layout_carve(layout, 2 * m, 8);
+    parts->drift = (double *)whorl_layout_carve(layout, plan->lean ? 0 : 3 * m, 8);
     parts->columns = (char *)whorl_layout_carve(layout, columns, plan->column_bytes);
 }
 
@@ -245,7 +254,7 @@ static uint64_t whorli_lanczos_total(const whorl_host *host, const whorl_map *ma
     return whorl_size_add(whorl_block_bytes(layout.bytes), whorli_lanczos_scratch(host, map, plan));
 }
 
-/* ---- >>plan ---------------------------------------------------------------------------------------------------------- */
+/* ---- >>plan ------------------------------------------------------------------------------------------------------ */
 
 whorl_lanczos_desc whorl_lanczos_default(void)
 {
@@ -260,7 +269,8 @@ static whorl_status whorli_lanczos_check(whorl_host *host, const whorl_map *map,
     if (status != WHORL_OK)
         return status;
     if (!map->hermitian)
-        return whorl_fail(host, WHORL_NOT_HERMITIAN, "the solver needs a Hermitian map: set map.hermitian if it is one");
+        return whorl_fail(host, WHORL_NOT_HERMITIAN,
+                          "the solver needs a Hermitian map: set map.hermitian if it is one");
     if (desc->wanted < 0 || desc->wanted > WHORL_LANCZOS_MOST_WANTED)
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "ask for 1 to 1000 pairs, or take the whole spectrum");
     if (desc->end != WHORL_LOWEST && desc->end != WHORL_HIGHEST)
@@ -300,6 +310,8 @@ static whorl_status whorli_lanczos_plan(whorl_host *host, const whorl_map *map, 
         plan->wanted = (int32_t)n;
     /* what accepted vectors lack couples to all later ones: together no more than a quarter of the tolerance */
     plan->strict = 0.25 / sqrt((double)(plan->wanted > 0 ? plan->wanted : 1));
+    if (!is_float)
+        plan->drift_limit = WHORLI_LANCZOS_DRIFT * plan->tolerance;
     reals = whorl_size_multiply(n, whorl_element_bytes(map->element));
     if (reals >= (UINT64_C(1) << 62))
         return whorl_fail(host, WHORL_TOO_LARGE, "a vector exceeds the address space: solve a smaller space");
@@ -330,7 +342,8 @@ static whorl_status whorli_lanczos_plan(whorl_host *host, const whorl_map *map, 
     return WHORL_OK;
 }
 
-whorl_status whorl_lanczos_bytes(whorl_host *host, const whorl_map *map, const whorl_lanczos_desc *desc, uint64_t *bytes)
+whorl_status whorl_lanczos_bytes(whorl_host *host, const whorl_map *map, const whorl_lanczos_desc *desc,
+                                 uint64_t *bytes)
 {
     whorl_lanczos_desc defaults = whorl_lanczos_default();
     whorli_lanczos_state plan;
@@ -345,7 +358,7 @@ whorl_status whorl_lanczos_bytes(whorl_host *host, const whorl_map *map, const w
     return WHORL_OK;
 }
 
-/* ---- >>make ---------------------------------------------------------------------------------------------------------- */
+/* ---- >>make ------------------------------------------------------------------------------------------------------ */
 
 static whorl_status whorli_lanczos_take(whorl_host *host, const whorli_lanczos_state *plan, whorli_lanczos_parts *parts)
 {
@@ -369,6 +382,7 @@ static whorl_status whorli_lanczos_take(whorl_host *host, const whorli_lanczos_s
     s->at_projected = (uint64_t)((char *)parts->projected - (char *)s);
     s->at_rotation = (uint64_t)((char *)parts->rotation - (char *)s);
     s->at_ritz = (uint64_t)((char *)parts->ritz - (char *)s);
+    s->at_drift = (uint64_t)((char *)parts->drift - (char *)s);
     s->at_columns = (uint64_t)(parts->columns - (char *)s);
     return WHORL_OK;
 }
@@ -401,8 +415,9 @@ whorl_status whorl_lanczos_make(whorl_host *host, const whorl_map *map, const wh
         return status;
     if (plan.n > 0 && desc->start != NULL) {
         parts.state->given_start = 1;
-        status = whorl_vector_copy(host, map->element, plan.n, desc->start,
-                                   plan.lean ? whorli_lanczos_column(parts.state, 2) : whorli_lanczos_basis(parts.state, 0));
+        status =
+            whorl_vector_copy(host, map->element, plan.n, desc->start,
+                              plan.lean ? whorli_lanczos_column(parts.state, 2) : whorli_lanczos_basis(parts.state, 0));
         if (status != WHORL_OK) {
             whorl_lanczos_free(host, parts.solver);
             return status;
@@ -439,10 +454,10 @@ static int32_t whorli_lanczos_is_sound(const whorli_lanczos_state *s)
            s->window <= WHORL_VECTOR_MOST_COLUMNS && (!s->lean || s->wanted == 1) &&
            s->column_bytes == ((s->n * whorl_element_bytes(s->element) + 63) & ~UINT64_C(63)) &&
            s->phase >= WHORLI_LANCZOS_START && s->phase <= WHORLI_LANCZOS_DONE &&
-           (s->lean || s->phase != WHORLI_LANCZOS_SUM) && s->accepted >= 0 && s->accepted <= s->wanted && s->filled >= 0 &&
-           s->filled <= steps && s->base >= 0 && s->base <= s->filled && s->verify >= 0 && s->verify <= s->filled &&
-           s->shown >= 0 && s->shown <= steps && s->step >= 0 && s->step <= steps &&
-           (s->phase != WHORLI_LANCZOS_GROW || (s->lean ? s->step : s->filled) < steps) &&
+           (s->lean || s->phase != WHORLI_LANCZOS_SUM) && s->accepted >= 0 && s->accepted <= s->wanted &&
+           s->filled >= 0 && s->filled <= steps && s->base >= 0 && s->base <= s->filled && s->verify >= 0 &&
+           s->verify <= s->filled && s->polished >= 0 && s->shown >= 0 && s->shown <= steps && s->step >= 0 &&
+           s->step <= steps && (s->phase != WHORLI_LANCZOS_GROW || (s->lean ? s->step : s->filled) < steps) &&
            (s->phase != WHORLI_LANCZOS_CHECK || s->filled > 0) &&
            (s->phase != WHORLI_LANCZOS_VERIFY || s->lean || s->filled < s->window || !(s->beta > 0.0));
 }
@@ -472,12 +487,15 @@ whorl_status whorl_lanczos_resume(whorl_host *host, const whorl_map *map, const 
     if (status != WHORL_OK)
         return status;
     if (state == NULL || bytes < sizeof plan)
-        return whorl_fail(host, WHORL_BAD_ARGUMENT, "this is no state of the solver: pass a copy of whorl_lanczos_state");
+        return whorl_fail(host, WHORL_BAD_ARGUMENT,
+                          "this is no state of the solver: pass a copy of whorl_lanczos_state");
     memcpy(&plan, state, sizeof plan);
     if (plan.magic != WHORLI_LANCZOS_MAGIC || plan.bytes != bytes)
-        return whorl_fail(host, WHORL_BAD_ARGUMENT, "this is no state of the solver: pass a copy of whorl_lanczos_state");
+        return whorl_fail(host, WHORL_BAD_ARGUMENT,
+                          "this is no state of the solver: pass a copy of whorl_lanczos_state");
     if (plan.n != map->rows || plan.element != map->element || !map->hermitian)
-        return whorl_fail(host, WHORL_BAD_ARGUMENT, "the state belongs to another map: resume with the one it was made for");
+        return whorl_fail(host, WHORL_BAD_ARGUMENT,
+                          "the state belongs to another map: resume with the one it was made for");
     if (!whorli_lanczos_is_sound(&plan))
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "the state is damaged: pass a copy of whorl_lanczos_state");
     status = whorli_lanczos_take(host, &plan, &parts);
@@ -487,8 +505,9 @@ whorl_status whorl_lanczos_resume(whorl_host *host, const whorl_map *map, const 
     if (made.bytes == bytes)
         memcpy(parts.state, state, (size_t)bytes);
     if (made.bytes != bytes || made.at_value != plan.at_value || made.at_residual != plan.at_residual ||
-        made.at_order != plan.at_order || made.at_projected != plan.at_projected || made.at_rotation != plan.at_rotation ||
-        made.at_ritz != plan.at_ritz || made.at_columns != plan.at_columns || !whorli_lanczos_is_listed(parts.state)) {
+        made.at_order != plan.at_order || made.at_projected != plan.at_projected ||
+        made.at_rotation != plan.at_rotation || made.at_ritz != plan.at_ritz || made.at_drift != plan.at_drift ||
+        made.at_columns != plan.at_columns || !whorli_lanczos_is_listed(parts.state)) {
         whorl_lanczos_free(host, parts.solver);
         return whorl_fail(host, WHORL_BAD_ARGUMENT, "the state is damaged: pass a copy of whorl_lanczos_state");
     }
@@ -496,7 +515,7 @@ whorl_status whorl_lanczos_resume(whorl_host *host, const whorl_map *map, const 
     return WHORL_OK;
 }
 
-/* ---- >>results ------------------------------------------------------------------------------------------------------- */
+/* ---- >>results --------------------------------------------------------------------------------------------------- */
 
 static int32_t whorli_lanczos_place(const whorl_lanczos *solver, int32_t k)
 {
@@ -560,7 +579,7 @@ int32_t whorl_lanczos_window(const whorl_lanczos *solver)
     return solver->state->window;
 }
 
-/* ---- >>cancel -------------------------------------------------------------------------------------------------------- */
+/* ---- >>cancel ---------------------------------------------------------------------------------------------------- */
 
 /*
  * Work that changes the state in place cannot stop in the middle. While it runs, polls go on, and a wish to stop is
@@ -601,7 +620,7 @@ static whorl_status whorli_defer_end(whorl_host *host, const whorli_deferral *de
     return status;
 }
 
-/* ---- >>grow ---------------------------------------------------------------------------------------------------------- */
+/* ---- >>grow ------------------------------------------------------------------------------------------------------ */
 
 /* w := w / ||w|| after orthogonalising it twice against the accepted vectors; *norm is that of what was left. */
 static whorl_status whorli_lanczos_begin_vector(whorl_host *host, whorli_lanczos_state *s, void *w, double *norm)
@@ -634,13 +653,16 @@ static whorl_status whorli_lanczos_start(whorl_host *host, whorli_lanczos_state 
     void *first = whorli_lanczos_basis(s, 0);
     double norm = 0.0;
     whorl_status status = WHORL_OK;
-    if (!(s->run == 0 && s->given_start))
+    if (!(s->run == 0 && s->given_start) && !s->again)
         status = whorl_vector_random(host, s->element, s->n, s->seed, s->run, first);
     if (status == WHORL_OK)
         status = whorli_lanczos_begin_vector(host, s, first, &norm);
     if (status != WHORL_OK)
         return status;
-    s->run++;
+    if (!s->again)
+        s->run++;
+    s->fresh = s->accepted == s->wanted && !s->again;
+    s->again = 0;
     if (!(norm > 0.0)) /* a start inside what was found: take the next one */
         return WHORL_OK;
     memset(whorli_lanczos_reals(s, s->at_projected), 0, (size_t)(8 * (uint64_t)s->window * (uint64_t)s->window));
@@ -648,14 +670,15 @@ static whorl_status whorli_lanczos_start(whorl_host *host, whorli_lanczos_state 
     s->beta = 0.0;
     s->gained = 0;
     s->exhausted = 0;
-    s->fresh = s->accepted == s->wanted;
+    s->clean = 0;
     s->phase = WHORLI_LANCZOS_GROW;
     return WHORL_OK;
 }
 
-/* Takes w out of the span of basis vectors first .. last - 1 and the accepted ones where asked; *taken = sum |overlap|^2. */
-static whorl_status whorli_lanczos_clean(whorl_host *host, whorli_lanczos_state *s, int32_t first, int32_t last, void *w,
-                                         double *taken)
+/* Takes w out of the span of basis vectors first .. last - 1 and the accepted ones where asked; *taken = sum
+ * |overlap|^2. */
+static whorl_status whorli_lanczos_clean(whorl_host *host, whorli_lanczos_state *s, int32_t first, int32_t last,
+                                         void *w, double *taken)
 {
     whorl_complex overlaps[64];
     uint64_t stride = whorli_lanczos_stride(s);
@@ -663,8 +686,8 @@ static whorl_status whorli_lanczos_clean(whorl_host *host, whorli_lanczos_state 
     *taken = 0.0;
     for (at = first; at < last; at += 64) { /* in portions, so that overlaps fit here */
         int32_t count = last - at < 64 ? last - at : 64;
-        whorl_status status = whorl_vector_project(host, s->element, s->n, count, whorli_lanczos_column(s, at), stride, w,
-                                                   overlaps);
+        whorl_status status =
+            whorl_vector_project(host, s->element, s->n, count, whorli_lanczos_column(s, at), stride, w, overlaps);
         if (status != WHORL_OK)
             return status;
         for (k = 0; k < count; k++)
@@ -673,33 +696,108 @@ static whorl_status whorli_lanczos_clean(whorl_host *host, whorli_lanczos_state 
     return WHORL_OK;
 }
 
-/* One product and the next basis vector. Nothing of the state changes before all of it is done. */
-static whorl_status whorli_lanczos_grow(whorl_host *host, const whorl_map *map, whorli_lanczos_state *s)
+/*
+ * The drift of a basis vector is what the recurrence says of its overlaps with the earlier ones (Simon, Math. Comp. 42,
+ * 115 (1984)): rows previous, current and next of the drift array. For basis vectors k < base, kept by a restart,
+ * the projected matrix couples to vector `base` only, by the arrow. Writes the next row and returns its largest entry.
+ */
+static double whorli_lanczos_drift(const whorli_lanczos_state *s, double alpha, double beta, double norm)
 {
-    int32_t j = s->filled, first = s->wanted - s->accepted, last = s->wanted + j + 1, pass, exhausted;
-    void *v = whorli_lanczos_basis(s, j), *w = whorli_lanczos_basis(s, j + 1);
-    double *projected = whorli_lanczos_reals(s, s->at_projected), beta = 0.0, taken, largest;
-    whorl_complex dots[2] = {{0.0, 0.0}, {0.0, 0.0}}, square = {0.0, 0.0};
-    whorl_status status = whorl_map_step(host, map, s->sign, v, 0.0, w, dots);
-    if (status != WHORL_OK)
-        return status;
-    if (!whorl_is_finite(dots[0].re) || !whorl_is_finite(dots[1].re))
-        return whorl_fail(host, WHORL_NOT_FINITE, "a product gave NaN, infinity or overflow: check or scale the couplings");
-    largest = sqrt(dots[1].re) > s->norm ? sqrt(dots[1].re) : s->norm;
-    status = whorli_lanczos_clean(host, s, j > 0 ? last - 2 : last - 1, last, w, &taken); /* what must be there */
+    const double *projected = whorli_lanczos_reals(s, s->at_projected);
+    const double *previous = whorli_lanczos_reals(s, s->at_drift), *current = previous + s->window;
+    double *next = whorli_lanczos_reals(s, s->at_drift) + 2 * (uint64_t)s->window;
+    double noise = 4.0 * 2.220446049250313e-16 * norm, largest = noise / beta, arrow = 0.0, back;
+    uint64_t m = (uint64_t)s->window, j = (uint64_t)s->filled, base = (uint64_t)s->base, k;
+    if (j <= base)
+        return largest;
+    back = projected[(j - 1) * m + j];
+    for (k = 0; k < base; k++)
+        arrow += projected[k * m + base] * current[k];
+    for (k = 0; k + 1 < j; k++) {
+        double w = (projected[k * m + k] - alpha) * current[k] - back * previous[k];
+        if (k < base)
+            w += projected[k * m + base] * current[base];
+        else
+            w += projected[k * m + k + 1] * current[k + 1] +
+                 (k == base ? arrow : projected[(k - 1) * m + k] * current[k - 1]);
+        next[k] = (w + (w < 0.0 ? -noise : noise)) / beta;
+        if (fabs(next[k]) > largest)
+            largest = fabs(next[k]);
+    }
+    next[j - 1] = noise / beta;
+    return largest;
+}
+
+/* Moves the rows of the drift on; `cleaned`: the new vector is orthogonal to all up to rounding. */
+static void whorli_lanczos_drift_on(whorli_lanczos_state *s, int32_t cleaned, double beta)
+{
+    uint64_t m = (uint64_t)s->window, j = (uint64_t)s->filled, k;
+    double *rows = whorli_lanczos_reals(s, s->at_drift), noise = 4.0 * 2.220446049250313e-16 * s->norm / beta;
+    memcpy(rows, rows + m, (size_t)(8 * m));
+    memcpy(rows + m, rows + 2 * m, (size_t)(8 * m));
+    for (k = 0; cleaned && k < j; k++)
+        rows[m + k] = noise;
+    rows[j] = 1.0;
+    if (j + 1 < m)
+        rows[m + j + 1] = 1.0;
+    rows[m + j] = noise;
+}
+
+/*
+ * Orthogonalises w = A v_j: against its two predecessors and what was accepted always; against the whole basis after a
+ * restart (the arrow), before the next one, and where the drift asks for it. *beta is the norm left.
+ */
+static whorl_status whorli_lanczos_orthogonalise(whorl_host *host, whorli_lanczos_state *s, void *w, double alpha,
+                                                 double norm, double *beta, int32_t *all)
+{
+    int32_t j = s->filled, first = s->wanted - s->accepted, last = s->wanted + j + 1, pass;
+    whorl_complex square = {0.0, 0.0};
+    double taken = 0.0;
+    whorl_status status = whorli_lanczos_clean(host, s, j > 0 ? last - 2 : last - 1, last, w, &taken);
+    *all = j == s->base || s->clean || j + 1 == s->window || !(s->drift_limit > 0.0);
+    if (!*all) {
+        if (status == WHORL_OK)
+            status = whorli_lanczos_clean(host, s, first, s->wanted, w, &taken);
+        if (status == WHORL_OK)
+            status = whorl_vector_dot(host, s->element, s->n, w, w, &square);
+        if (status != WHORL_OK)
+            return status;
+        *beta = sqrt(square.re);
+        if (*beta > 1e-6 * norm && whorli_lanczos_drift(s, alpha, *beta, norm) <= s->drift_limit)
+            return WHORL_OK;
+        *all = 2; /* and the one after it */
+    }
     for (pass = 0; pass < 3 && status == WHORL_OK; pass++) {
         status = whorli_lanczos_clean(host, s, first, last, w, &taken);
         if (status == WHORL_OK)
             status = whorl_vector_dot(host, s->element, s->n, w, w, &square);
-        if (square.re > taken) /* little was taken away: orthogonal to working accuracy */
+        if (square.re > taken && (pass > 0 || j > s->base || j == 0)) /* little was taken: orthogonal to rounding */
             break;
     }
+    *beta = square.re > taken ? sqrt(square.re) : 0.0;
+    return status;
+}
+
+/* One product and the next basis vector. Nothing of the state changes before all of it is done. */
+static whorl_status whorli_lanczos_grow(whorl_host *host, const whorl_map *map, whorli_lanczos_state *s)
+{
+    int32_t j = s->filled, all = 0, exhausted;
+    void *v = whorli_lanczos_basis(s, j), *w = whorli_lanczos_basis(s, j + 1);
+    double *projected = whorli_lanczos_reals(s, s->at_projected), beta = 0.0, largest;
+    whorl_complex dots[2] = {{0.0, 0.0}, {0.0, 0.0}};
+    whorl_status status = whorl_map_step(host, map, s->sign, v, 0.0, w, dots);
     if (status != WHORL_OK)
         return status;
-    beta = sqrt(square.re);
+    if (!whorl_is_finite(dots[0].re) || !whorl_is_finite(dots[1].re))
+        return whorl_fail(host, WHORL_NOT_FINITE,
+                          "a product gave NaN, infinity or overflow: check or scale the couplings");
+    largest = sqrt(dots[1].re) > s->norm ? sqrt(dots[1].re) : s->norm;
+    status = whorli_lanczos_orthogonalise(host, s, w, dots[0].re, largest, &beta, &all);
+    if (status != WHORL_OK)
+        return status;
     /* exhausted by dimension, or what is left is rounding */
     exhausted = (uint64_t)j + 1 + (uint64_t)s->accepted >= s->n;
-    if (exhausted || beta <= (whorl_element_is_float(s->element) ? 1e-6 : 1e-14) * largest || !(square.re > taken))
+    if (exhausted || beta <= (whorl_element_is_float(s->element) ? 1e-6 : 1e-14) * largest)
         beta = 0.0;
     else
         status = whorl_vector_scale(host, s->element, s->n, 1.0 / beta, w);
@@ -709,6 +807,9 @@ static whorl_status whorli_lanczos_grow(whorl_host *host, const whorl_map *map, 
     if (j + 1 < s->window)
         projected[(uint64_t)j * (uint64_t)s->window + (uint64_t)j + 1] = beta;
     s->norm = largest;
+    if (beta > 0.0)
+        whorli_lanczos_drift_on(s, all != 0, beta);
+    s->clean = all == 2;
     s->beta = beta;
     s->filled = j + 1;
     s->exhausted = exhausted;
@@ -717,7 +818,7 @@ static whorl_status whorli_lanczos_grow(whorl_host *host, const whorl_map *map, 
     return WHORL_OK;
 }
 
-/* ---- >>restart ------------------------------------------------------------------------------------------------------- */
+/* ---- >>restart --------------------------------------------------------------------------------------------------- */
 
 /* Eigenpairs of the projected matrix (lower triangle, column by column) into ritz and rotation. */
 static whorl_status whorli_lanczos_ritz(whorl_host *host, whorli_lanczos_state *s)
@@ -757,6 +858,18 @@ static int32_t whorli_lanczos_belongs(const whorli_lanczos_state *s, int32_t i, 
     return value < whorli_lanczos_reals(s, s->at_value)[order[rank]] - 2.0 * s->tolerance * s->norm;
 }
 
+/* After a rotation of the basis the next vector's drift is bounded by what it was before, whatever the combination. */
+static void whorli_lanczos_drift_kept(whorli_lanczos_state *s)
+{
+    double *rows = whorli_lanczos_reals(s, s->at_drift), sum = 0.0;
+    uint64_t m = (uint64_t)s->window, k;
+    for (k = 0; k < (uint64_t)s->filled; k++)
+        sum += rows[m + k] * rows[m + k];
+    sum = sqrt(sum);
+    for (k = 0; k < m; k++)
+        rows[m + k] = sum;
+}
+
 /*
  * Thick restart: the first `keep` Ritz vectors become the basis, the next vector follows them, and the projected matrix
  * is their values with an arrow of couplings to it.
@@ -773,7 +886,8 @@ static whorl_status whorli_lanczos_restart(whorl_host *host, whorli_lanczos_stat
     status = whorl_vector_combine(host, s->element, s->n, s->filled, keep, whorli_lanczos_basis(s, 0),
                                   whorli_lanczos_stride(s), rotation);
     if (status == WHORL_OK && s->beta > 0.0)
-        status = whorl_vector_copy(host, s->element, s->n, whorli_lanczos_basis(s, s->filled), whorli_lanczos_basis(s, keep));
+        status = whorl_vector_copy(host, s->element, s->n, whorli_lanczos_basis(s, s->filled),
+                                   whorli_lanczos_basis(s, keep));
     if (status == WHORL_OK) {
         memset(projected, 0, (size_t)(8 * m * m));
         for (j = 0; j < keep; j++) {
@@ -782,15 +896,16 @@ static whorl_status whorli_lanczos_restart(whorl_host *host, whorli_lanczos_stat
                 projected[(uint64_t)j * m + (uint64_t)keep] =
                     s->beta * rotation[(uint64_t)j * (uint64_t)s->filled + (uint64_t)s->filled - 1];
         }
+        whorli_lanczos_drift_kept(s);
         s->shown = s->filled;
         s->filled = s->base = keep;
-        s->verify = 0;
+        s->verify = s->polished = s->refuted = 0;
         s->phase = WHORLI_LANCZOS_VERIFY;
     }
     return whorli_defer_end(host, &deferral, status);
 }
 
-/* ---- >>accept -------------------------------------------------------------------------------------------------------- */
+/* ---- >>accept ---------------------------------------------------------------------------------------------------- */
 
 /* Puts a verified pair into the list, in the place of the innermost one if it is full. */
 static whorl_status whorli_lanczos_accept(whorl_host *host, whorli_lanczos_state *s, const void *x, double value,
@@ -829,7 +944,8 @@ static whorl_status whorli_lanczos_drop(whorl_host *host, whorli_lanczos_state *
             projected[(uint64_t)i * m + (uint64_t)s->filled] = projected[(uint64_t)from * m + (uint64_t)s->filled];
     }
     if (status == WHORL_OK && s->beta > 0.0 && left < s->filled)
-        status = whorl_vector_copy(host, s->element, s->n, whorli_lanczos_basis(s, s->filled), whorli_lanczos_basis(s, left));
+        status = whorl_vector_copy(host, s->element, s->n, whorli_lanczos_basis(s, s->filled),
+                                   whorli_lanczos_basis(s, left));
     for (i = 0; i < left; i++) { /* the arrow moves with the next vector */
         double coupling = s->filled < s->window ? projected[(uint64_t)i * m + (uint64_t)s->filled] : 0.0;
         if (s->filled < s->window && left != s->filled)
@@ -849,14 +965,23 @@ static double whorli_lanczos_arrow(const whorli_lanczos_state *s, int32_t i)
     return s->beta > 0.0 ? fabs(projected[(uint64_t)i * (uint64_t)s->window + (uint64_t)s->filled]) : 0.0;
 }
 
-/* One product for Ritz vector number `verify`: accepted if its residual is small enough; *good tells. */
-static whorl_status whorli_lanczos_verify_one(whorl_host *host, const whorl_map *map, whorli_lanczos_state *s, int32_t *good)
+/* One product for Ritz vector number `verify`: accepted if its residual is small enough, refuted otherwise. */
+static whorl_status whorli_lanczos_verify_one(whorl_host *host, const whorl_map *map, whorli_lanczos_state *s)
 {
     void *x = whorli_lanczos_basis(s, s->verify), *image = whorli_lanczos_basis(s, s->filled + (s->beta > 0.0));
     whorl_complex dots[2] = {{0.0, 0.0}, {0.0, 0.0}}, square = {0.0, 0.0};
     whorli_deferral deferral;
-    double residual;
-    whorl_status status = whorl_map_step(host, map, s->sign, x, 0.0, image, dots);
+    double residual = 0.0;
+    whorl_status status;
+    if (s->polished <= s->verify) { /* changes x, so it is done once */
+        whorli_defer(host, &deferral);
+        status = whorli_lanczos_begin_vector(host, s, x, &residual);
+        s->polished = s->verify + 1;
+        status = whorli_defer_end(host, &deferral, status);
+        if (status != WHORL_OK)
+            return status;
+    }
+    status = whorl_map_step(host, map, s->sign, x, 0.0, image, dots);
     if (status == WHORL_OK)
         status = whorl_vector_add(host, s->element, s->n, whorl_complex_of(-dots[0].re, 0.0), x, image);
     if (status == WHORL_OK)
@@ -865,18 +990,24 @@ static whorl_status whorli_lanczos_verify_one(whorl_host *host, const whorl_map 
         return status;
     residual = sqrt(square.re);
     if (!whorl_is_finite(residual))
-        return whorl_fail(host, WHORL_NOT_FINITE, "a product gave NaN, infinity or overflow: check or scale the couplings");
-    *good = residual <= s->tolerance * s->norm;
+        return whorl_fail(host, WHORL_NOT_FINITE,
+                          "a product gave NaN, infinity or overflow: check or scale the couplings");
     whorli_defer(host, &deferral);
-    if (*good)
+    if (residual <= s->tolerance * s->norm) {
         status = whorli_lanczos_accept(host, s, x, dots[0].re, residual);
-    if (status == WHORL_OK) {
-        s->products++;
-        if (*good)
+        if (status == WHORL_OK)
             s->verify++;
-        else
-            s->strict *= 0.25; /* the recurrence promised too much: ask more of it */
+    } else {
+        if (s->drift_limit > 0.0) { /* perhaps the drift was too large: begin again from here, without it */
+            status = whorl_vector_copy(host, s->element, s->n, x, whorli_lanczos_basis(s, 0));
+            s->drift_limit = 0.0;
+            s->again = 1;
+        }
+        s->strict *= 0.25; /* the recurrence promised too much: ask more of it */
+        s->refuted = 1;
     }
+    if (status == WHORL_OK)
+        s->products++;
     return whorli_defer_end(host, &deferral, status);
 }
 
@@ -899,14 +1030,12 @@ static whorl_status whorli_lanczos_verify(whorl_host *host, const whorl_map *map
     const double *projected = whorli_lanczos_reals(s, s->at_projected);
     whorli_deferral deferral;
     whorl_status status;
-    int32_t i = s->verify, good = 1;
-    if (i < s->filled && whorli_lanczos_arrow(s, i) <= s->strict * s->tolerance * s->norm &&
+    int32_t i = s->verify;
+    if (!s->refuted && i < s->filled && whorli_lanczos_arrow(s, i) <= s->strict * s->tolerance * s->norm &&
         whorli_lanczos_belongs(s, 0, projected[(uint64_t)i * (uint64_t)s->window + (uint64_t)i])) {
-        status = whorli_lanczos_verify_one(host, map, s, &good);
-        if (status != WHORL_OK || good)
-            return status; /* still in this phase: the next one follows */
+        return whorli_lanczos_verify_one(host, map, s); /* still in this phase: the next one follows */
     }
-    if (s->accepted == s->wanted && s->exhausted && good) {
+    if (s->accepted == s->wanted && s->exhausted && !s->refuted) {
         s->cut = whorli_lanczos_is_cut(s, s->verify);
         whorli_lanczos_finish(s, 1);
         return WHORL_OK;
@@ -915,7 +1044,7 @@ static whorl_status whorli_lanczos_verify(whorl_host *host, const whorl_map *map
         whorli_lanczos_finish(s, 0);
         return WHORL_OK;
     }
-    if (!(s->beta > 0.0) || (s->accepted == s->wanted && !s->fresh)) {
+    if (s->again || !(s->beta > 0.0) || (s->accepted == s->wanted && !s->fresh)) {
         s->phase = WHORLI_LANCZOS_START;
         return WHORL_OK;
     }
@@ -936,15 +1065,15 @@ static int32_t whorli_lanczos_is_due(const whorli_lanczos_state *s)
 }
 
 /*
- * The space shows nothing below the list: is that the end? Not while its lowest Ritz vector may still hide a lower level:
- * one that makes up a part w of it leaves a residual of at least sqrt(w (1 - w)) times the distance between the two. A
- * residual of 1/32 of the distance to the list keeps w below 1/1000.
+ * The space shows nothing below the list: is that the end? Not while its lowest Ritz vector may still hide a lower
+ * level: one that makes up a part w of it leaves a residual of at least sqrt(w (1 - w)) times the distance between the
+ * two. A residual of 1/256 of the distance to the list keeps w below 1/65000.
  */
 static int32_t whorli_lanczos_verdict(whorli_lanczos_state *s)
 {
     const double *ritz = whorli_lanczos_reals(s, s->at_ritz);
     double residual = whorli_lanczos_estimate(s, 0), margin = 2.0 * s->tolerance * s->norm;
-    if (residual > s->tolerance * s->norm && 32.0 * residual > ritz[0] - whorli_lanczos_threshold(s) - margin)
+    if (residual > s->tolerance * s->norm && 256.0 * residual > ritz[0] - whorli_lanczos_threshold(s) - margin)
         return 0;
     if (s->fresh && s->gained == 0) {
         s->shown = s->filled;
@@ -1003,7 +1132,7 @@ static whorl_status whorli_lanczos_begin(whorl_host *host, whorli_lanczos_state 
     return whorli_defer_end(host, &deferral, status);
 }
 
-/* ---- >>lean ---------------------------------------------------------------------------------------------------------- */
+/* ---- >>lean ------------------------------------------------------------------------------------------------------ */
 
 /* Columns: 0 and 1 take turns as the last two Lanczos vectors; 2 is the start and then the result. */
 static double *whorli_lean_alpha(const whorli_lanczos_state *s)
@@ -1038,7 +1167,8 @@ static whorl_status whorli_lean_start(whorl_host *host, whorli_lanczos_state *s)
     return WHORL_OK;
 }
 
-/* One step of the three-term recurrence; alpha and beta are written in the first pass, and come out equal in the second. */
+/* One step of the three-term recurrence; alpha and beta are written in the first pass, and come out equal in the
+ * second. */
 static whorl_status whorli_lean_step(whorl_host *host, const whorl_map *map, whorli_lanczos_state *s)
 {
     int32_t j = s->step;
@@ -1049,7 +1179,8 @@ static whorl_status whorli_lean_step(whorl_host *host, const whorl_map *map, who
     if (status != WHORL_OK)
         return status;
     if (!whorl_is_finite(dots[0].re) || !whorl_is_finite(dots[1].re))
-        return whorl_fail(host, WHORL_NOT_FINITE, "a product gave NaN, infinity or overflow: check or scale the couplings");
+        return whorl_fail(host, WHORL_NOT_FINITE,
+                          "a product gave NaN, infinity or overflow: check or scale the couplings");
     status = whorl_vector_add(host, s->element, s->n, whorl_complex_of(-dots[0].re, 0.0), v, w);
     if (status == WHORL_OK)
         status = whorl_vector_norm(host, s->element, s->n, w, &norm);
@@ -1171,7 +1302,7 @@ static whorl_status whorli_lean_advance(whorl_host *host, const whorl_map *map, 
     return whorli_defer_end(host, &deferral, status);
 }
 
-/* ---- >>advance ------------------------------------------------------------------------------------------------------- */
+/* ---- >>advance --------------------------------------------------------------------------------------------------- */
 
 static whorl_status whorli_lanczos_advance_one(whorl_host *host, const whorl_map *map, whorli_lanczos_state *s)
 {

@@ -356,6 +356,67 @@ static void random_matrices(void)
     }
 }
 
+/* The settled part of a state: what a next step reads. */
+static uint64_t state_digest(const whorl_lanczos *solver)
+{
+    uint64_t bytes = 0, digest = 0, i;
+    const unsigned char *state = (const unsigned char *)whorl_lanczos_state(solver, &bytes);
+    for (i = 0; i < 256; i++) /* numbers and counts; columns beyond them may hold scratch */
+        digest = (digest ^ state[i]) * UINT64_C(0x9E3779B97F4A7C15) + (digest >> 29);
+    return digest;
+}
+
+/* The torus with every element of y rounded to float: no vector has a residual of 1e-10 of the norm. */
+static whorl_status rounded_apply(whorl_host *host, const whorl_map *map, const void *x, void *y, int32_t count)
+{
+    whorl_status status = torus_apply(host, map, x, y, count);
+    uint64_t i;
+    for (i = 0; i < map->rows; i++)
+        ((double *)y)[i] = (double)(float)((double *)y)[i];
+    return status;
+}
+
+/* What the recurrence promises and a product does not confirm is not accepted; a tolerance above the errors is met. */
+static void inexact_products(void)
+{
+    enum { SIDE = 20 };
+    known_map known = {NULL, SIDE, NULL};
+    whorl_map map = make_map(&known, SIDE * SIDE, WHORL_REAL_DOUBLE, rounded_apply);
+    uint64_t digest[2] = {0, 0};
+    int cancelling, i;
+    for (cancelling = 0; cancelling <= 1; cancelling++) {
+        whorl_host host = whorl_host_default();
+        whorl_lanczos_desc desc = whorl_lanczos_default();
+        whorl_lanczos *solver = NULL;
+        check_polls polls = {0, 0};
+        whorl_status status;
+        desc.wanted = 2;
+        desc.end = WHORL_HIGHEST;
+        desc.most_products = 600;
+        CHECK_STATUS(whorl_lanczos_make(&host, &map, &desc, &solver), WHORL_OK, &host);
+        host.poll = cancelling ? check_poll : NULL;
+        host.poll_context = &polls;
+        i = 0;
+        do { /* cancelled at every place where a call can be */
+            polls.calls = 0;
+            polls.cancel_at = cancelling ? (uint64_t)(2 + i++ % 101) : 0;
+            status = whorl_lanczos_advance(&host, &map, solver, 0);
+        } while (status == WHORL_CANCELLED && i < 100000);
+        CHECK_STATUS(status, WHORL_NOT_CONVERGED, &host);
+        CHECK(whorl_lanczos_count(solver) == 0 && whorl_lanczos_checked(solver) == 0);
+        digest[cancelling] = state_digest(solver);
+        whorl_lanczos_free(&host, solver);
+        desc.tolerance = 1e-6;
+        desc.most_products = 0;
+        host.poll = NULL;
+        CHECK_STATUS(whorl_lanczos_make(&host, &map, &desc, &solver), WHORL_OK, &host);
+        CHECK_STATUS(whorl_lanczos_advance(&host, &map, solver, 0), WHORL_OK, &host);
+        CHECK_NEAR(whorl_lanczos_value(solver, 0), 8.0, 1e-7, "4 + 2 + 2 (common practice)");
+        whorl_lanczos_free(&host, solver);
+    }
+    CHECK(digest[0] == digest[1]);
+}
+
 static void lean_form(void)
 {
     double values[3000];
@@ -674,6 +735,7 @@ int main(void)
     check_run("hidden_level", hidden_level);
     check_run("check_of_mixtures", check_of_mixtures);
     check_run("random_matrices", random_matrices);
+    check_run("inexact_products", inexact_products);
     check_run("lean_form", lean_form);
     check_run("byte_limits", byte_limits);
     check_run("same_bits", same_bits);
