@@ -218,6 +218,7 @@ typedef struct whorli_runs {
     int32_t bits, run_bits, row_bits; /* of reals: a vector, a run, a row of one high part */
     struct whorli_run_flip *flips;    /* as the action's */
     double *lane_values;              /* [values][8] */
+    uint8_t *zeros;                   /* [values]: 1 where all eight vanish */
     double *diagonal;                 /* [row]: the part of the diagonal without high parts */
     uint64_t *signs;                  /* [row / 8]: bit j: the parity with the diagonal's character j */
 } whorli_runs;
@@ -1341,12 +1342,12 @@ static void whorli_split_fill_terms(whorl_action *action)
     for (g = diagonal != NULL ? 1 : 0; g < action->flip_count; g++) {
         whorli_action_flip *flip = action->flips + g;
         flip->list = UINT32_MAX;
-        if (flip->rank < 0) {
+        if (flip->rank < 0 && !action->runs.used) {
             split->fits = 0;
             return;
         }
         if ((flip->x & ~low) == 0) {
-            split->near_values = flip->first_value + (UINT64_C(1) << flip->rank);
+            split->near_values = flip->first_value + (flip->rank < 0 ? 0 : UINT64_C(1) << flip->rank);
             split->has_odd |= flip->odd != 0;
             continue;
         }
@@ -1912,8 +1913,8 @@ static whorl_status whorli_split_apply(whorl_host *host, const whorli_action_job
 /* ---- >>runs ------------------------------------------------------------------------------------------------------
  *
  * All states, double elements. A vector of N sites, N + 1 bits for complex elements (bit 0: re or im), is cut into runs
- * of 2^11 reals: 256 vectors of eight lanes. One run of y stays in the first-level cache while the flips are added to it
- * one after the other; each reads one run of x, with vectors and lanes permuted by the middle and lowest bits of its
+ * of 2^11 reals: 256 vectors of eight lanes. One run of y stays in the first-level cache while the flips are added to
+ * it one after the other; each reads one run of x, with vectors and lanes permuted by the middle and lowest bits of its
  * mask. Where the factor does not depend on the lane only the vectors are visited on which it does not vanish: half of
  * them for an exchange.
  */
@@ -1951,6 +1952,7 @@ static void whorli_runs_carve(whorl_layout *layout, whorl_action *plan)
     runs->flips = (whorli_run_flip *)whorl_layout_carve(layout, flips, sizeof *runs->flips);
     runs->lane_values =
         (double *)whorl_layout_carve(layout, whorl_size_multiply(plan->value_room, WHORLI_LANES), sizeof(double));
+    runs->zeros = (uint8_t *)whorl_layout_carve(layout, plan->value_room, 1);
     runs->diagonal = (double *)whorl_layout_carve(layout, row < WHORLI_LANES ? WHORLI_LANES : row, sizeof(double));
     runs->signs = (uint64_t *)whorl_layout_carve(layout, row, sizeof(uint64_t));
 }
@@ -1971,13 +1973,18 @@ static void whorli_runs_fill_flip(const whorl_action *action, const whorli_actio
         to->basis[k] = flip->basis[k] << shift;
         basis |= to->basis[k];
     }
-    to->plain = to->lanes == 0 && (basis & 7) == 0;
+    to->plain = flip->rank >= 0 && to->lanes == 0 && (basis & 7) == 0;
     to->whole = to->plain && to->middle == 0 && (basis & run) == 0;
-    for (p = 0; p < UINT64_C(1) << flip->rank; p++) {
+    for (v = 0; flip->rank < 0 && v < vectors; v++) /* factors of its own for each vector: whorli_runs_factors */
+        to->order[v] = to->pattern[v] = (uint8_t)v;
+    for (p = 0; flip->rank >= 0 && p < UINT64_C(1) << flip->rank; p++) {
+        int32_t zero = 1;
         for (l = 0; l < WHORLI_LANES; l++) {
             double f = action->values[flip->first_value + (p ^ whorli_action_pattern(flip, l >> shift))];
             runs->lane_values[(flip->first_value + p) * WHORLI_LANES + l] = flip->odd && (l & 1) != 0 ? -f : f;
+            zero = zero && f == 0.0;
         }
+        runs->zeros[flip->first_value + p] = (uint8_t)zero;
         for (v = 0; v < vectors; v++)
             if (whorli_action_pattern(flip, (v << 3) >> shift) == p) {
                 to->pattern[used] = (uint8_t)p;
@@ -2012,8 +2019,8 @@ static void whorli_runs_fill_terms(whorl_action *action)
 typedef struct whorli_runs_loops {
     void (*diagonal)(const whorli_runs *runs, uint64_t first, uint64_t count, const double *characters,
                      uint64_t character_count, const double *x, double *y);
-    void (*lanes)(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned, const double *values, const double *x,
-                  double *y);
+    void (*lanes)(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned, const double *values,
+                  const uint8_t *zeros, const double *x, double *y);
     void (*plain)(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned, const double *values, const double *x,
                   double *y);
     void (*whole)(double *y, const double *const *x, const double *f, int32_t count, uint64_t reals);
@@ -2039,7 +2046,7 @@ static void whorli_runs_diagonal_plain(const whorli_runs *runs, uint64_t first, 
 }
 
 static void whorli_runs_lanes_plain(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned,
-                                    const double *values, const double *x, double *y)
+                                    const double *values, const uint8_t *zeros, const double *x, double *y)
 {
     uint64_t i, l, lanes = flip->lanes;
     for (i = 0; i < vectors; i++) {
@@ -2047,6 +2054,8 @@ static void whorli_runs_lanes_plain(const whorli_run_flip *flip, uint64_t vector
         const double *f = values + (flip->pattern[i] ^ turned) * WHORLI_LANES;
         const double *from = x + (v ^ flip->middle) * WHORLI_LANES;
         double *to = y + v * WHORLI_LANES, turn[WHORLI_LANES];
+        if (zeros[flip->pattern[i] ^ turned])
+            continue;
         for (l = 0; l < WHORLI_LANES; l++)
             turn[l] = from[l ^ lanes];
         for (l = 0; l < WHORLI_LANES; l++)
@@ -2098,11 +2107,13 @@ whorli_exchange_avx2(whorli_double4 a, const uint64_t lanes)
 
 WHORLI_TARGET_AVX2 static inline __attribute__((always_inline)) void
 whorli_runs_exchanged_avx2(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned, const double *values,
-                           const double *x, double *y, const uint64_t lanes)
+                           const uint8_t *zeros, const double *x, double *y, const uint64_t lanes)
 {
     uint64_t i;
     for (i = 0; i < vectors; i++) {
         uint64_t v = flip->order[i], part;
+        if (zeros[flip->pattern[i] ^ turned])
+            continue;
         const double *f = values + (flip->pattern[i] ^ turned) * WHORLI_LANES;
         const double *from = x + (v ^ flip->middle) * WHORLI_LANES;
         double *to = y + v * WHORLI_LANES;
@@ -2116,32 +2127,33 @@ whorli_runs_exchanged_avx2(const whorli_run_flip *flip, uint64_t vectors, uint64
 }
 
 WHORLI_TARGET_AVX2 static void whorli_runs_lanes_avx2(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned,
-                                                      const double *values, const double *x, double *y)
+                                                      const double *values, const uint8_t *zeros, const double *x,
+                                                      double *y)
 {
     switch (flip->lanes) {
     case 0:
-        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 0);
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, zeros, x, y, 0);
         break;
     case 1:
-        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 1);
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, zeros, x, y, 1);
         break;
     case 2:
-        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 2);
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, zeros, x, y, 2);
         break;
     case 3:
-        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 3);
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, zeros, x, y, 3);
         break;
     case 4:
-        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 4);
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, zeros, x, y, 4);
         break;
     case 5:
-        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 5);
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, zeros, x, y, 5);
         break;
     case 6:
-        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 6);
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, zeros, x, y, 6);
         break;
     default:
-        whorli_runs_exchanged_avx2(flip, vectors, turned, values, x, y, 7);
+        whorli_runs_exchanged_avx2(flip, vectors, turned, values, zeros, x, y, 7);
         break;
     }
 }
@@ -2220,11 +2232,13 @@ whorli_exchange_avx512(whorli_double8 a, const uint64_t lanes)
 
 WHORLI_TARGET_AVX512 static inline __attribute__((always_inline)) void
 whorli_runs_exchanged_avx512(const whorli_run_flip *flip, uint64_t vectors, uint64_t turned, const double *values,
-                             const double *x, double *y, const uint64_t lanes)
+                             const uint8_t *zeros, const double *x, double *y, const uint64_t lanes)
 {
     uint64_t i;
     for (i = 0; i < vectors; i++) {
         uint64_t v = flip->order[i], part;
+        if (zeros[flip->pattern[i] ^ turned])
+            continue;
         const double *f = values + (flip->pattern[i] ^ turned) * WHORLI_LANES;
         const double *from = x + (v ^ flip->middle) * WHORLI_LANES;
         double *to = y + v * WHORLI_LANES;
@@ -2238,33 +2252,33 @@ whorli_runs_exchanged_avx512(const whorli_run_flip *flip, uint64_t vectors, uint
 }
 
 WHORLI_TARGET_AVX512 static void whorli_runs_lanes_avx512(const whorli_run_flip *flip, uint64_t vectors,
-                                                          uint64_t turned, const double *values, const double *x,
-                                                          double *y)
+                                                          uint64_t turned, const double *values, const uint8_t *zeros,
+                                                          const double *x, double *y)
 {
     switch (flip->lanes) {
     case 0:
-        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 0);
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, zeros, x, y, 0);
         break;
     case 1:
-        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 1);
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, zeros, x, y, 1);
         break;
     case 2:
-        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 2);
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, zeros, x, y, 2);
         break;
     case 3:
-        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 3);
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, zeros, x, y, 3);
         break;
     case 4:
-        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 4);
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, zeros, x, y, 4);
         break;
     case 5:
-        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 5);
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, zeros, x, y, 5);
         break;
     case 6:
-        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 6);
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, zeros, x, y, 6);
         break;
     default:
-        whorli_runs_exchanged_avx512(flip, vectors, turned, values, x, y, 7);
+        whorli_runs_exchanged_avx512(flip, vectors, turned, values, zeros, x, y, 7);
         break;
     }
 }
@@ -2348,6 +2362,43 @@ typedef struct whorli_runs_job {
     whorli_runs_loops loops;
 } whorli_runs_job;
 
+/* Factors of a flip that is not simple, for all lanes of the run at `base`. */
+static void whorli_runs_factors(const whorl_action *action, const whorli_action_flip *flip, uint64_t base, double *f)
+{
+    const whorli_runs *runs = &action->runs;
+    uint64_t shift = (uint64_t)action->width - 1, run = UINT64_C(1) << runs->run_bits,
+             row = UINT64_C(1) << runs->row_bits;
+    uint64_t part = row < run ? row : run, i, k, v, l, j;
+    for (i = 0; i < run; i += part) {
+        uint64_t low = ((base + i) & (row - 1)) >> shift, high = (base + i) >> shift;
+        for (v = 0; v < part; v++)
+            f[i + v] = 0.0;
+        for (k = 0; k < flip->low_count + flip->character_count; k++) {
+            uint64_t z;
+            double e = 0.0, lane[WHORLI_LANES];
+            if (k < flip->low_count) {
+                z = action->terms[flip->first_low + k].low;
+                e = action->terms[flip->first_low + k].d;
+            } else {
+                const whorli_action_character *character =
+                    action->characters + flip->first_character + (k - flip->low_count);
+                z = character->low;
+                for (j = character->first; j < character->first + character->count; j++)
+                    e += whorl_bits_parity(action->terms[j].high & high) ? -action->terms[j].d : action->terms[j].d;
+            }
+            for (l = 0; l < WHORLI_LANES; l++)
+                lane[l] = whorl_bits_parity(z & (l >> shift)) ? -e : e;
+            for (v = 0; v < part; v += WHORLI_LANES) {
+                double sign = whorl_bits_parity(z & (low + (v >> shift))) ? -1.0 : 1.0;
+                for (l = 0; l < WHORLI_LANES; l++)
+                    f[i + v + l] += sign * lane[l];
+            }
+        }
+    }
+    for (i = 1; flip->odd && i < run; i += 2)
+        f[i] = -f[i];
+}
+
 /* The flips of one run, whole runs up to four at a time. */
 static void whorli_runs_flips(const whorl_action *action, const whorli_runs_loops *loops, uint64_t base,
                               const double *x, double *y)
@@ -2355,8 +2406,9 @@ static void whorli_runs_flips(const whorl_action *action, const whorli_runs_loop
     const whorli_runs *runs = &action->runs;
     uint64_t g = whorli_action_diagonal(action) == NULL ? 0 : 1, reals = UINT64_C(1) << runs->run_bits;
     uint64_t vectors = reals >> 3;
+    static const uint8_t never[WHORLI_RUN_VECTORS] = {0};
     const double *waiting[4] = {NULL, NULL, NULL, NULL};
-    double f[4] = {0.0, 0.0, 0.0, 0.0};
+    double f[4] = {0.0, 0.0, 0.0, 0.0}, factors[1 << WHORLI_RUN_BITS];
     int32_t count = 0, k;
     for (; g < action->flip_count; g++) {
         const whorli_run_flip *flip = runs->flips + g;
@@ -2378,10 +2430,15 @@ static void whorli_runs_flips(const whorl_action *action, const whorli_runs_loop
         if (count > 0)
             loops->whole(y, waiting, f, count, reals);
         count = 0;
-        if (flip->plain)
+        if (flip->rank < 0) {
+            whorli_runs_factors(action, action->flips + g, base, factors);
+            loops->lanes(flip, vectors, 0, factors, never, from, y);
+        } else if (flip->plain) {
             loops->plain(flip, vectors, turned, values, from, y);
-        else
-            loops->lanes(flip, vectors, turned, runs->lane_values + flip->first_value * WHORLI_LANES, from, y);
+        } else {
+            loops->lanes(flip, vectors, turned, runs->lane_values + flip->first_value * WHORLI_LANES,
+                         runs->zeros + flip->first_value, from, y);
+        }
     }
     if (count > 0)
         loops->whole(y, waiting, f, count, reals);
