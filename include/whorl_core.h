@@ -70,8 +70,9 @@
 #endif
 
 /*
- * Fixed arithmetic, whatever flags the host compiles with: no contraction, no reassociation. Helpers and implementations
- * stand between these two. whorl_arithmetic() tells at run time whether it held.
+ * Fixed arithmetic under the host's flags: no contraction, no reassociation. Helpers and implementations stand between
+ * these two. whorl_arithmetic() tells at run time whether it held. Known not to hold: GCC 12 in C with -ffast-math or
+ * -Ofast together with -mfma or an -march that has it (-Ofast alone holds); no order of the two pragmas below mends it.
  */
 #if defined(__clang__)
 #define WHORLI_ARITHMETIC_BEGIN _Pragma("float_control(precise, on, push)") _Pragma("clang fp contract(off)")
