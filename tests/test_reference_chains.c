@@ -50,7 +50,7 @@ static const char *ring_row(const reference_row *row)
     const char *id = row->field[REFERENCE_ID];
     int32_t n = ref_integer(row->field[REFERENCE_GEOMETRY], "N=");
     double ground;
-    if (ref_begins(id, "ring_T_") || ref_begins(id, "ring_max") || ref_begins(id, "bf_") ||
+    if (ref_begins(id, "ring_T_") || ref_begins(id, "ring_chimax") || ref_begins(id, "bf_") ||
         strstr(row->field[REFERENCE_GEOMETRY], "k_B T") != NULL ||
         strstr(row->field[REFERENCE_QUANTITY], "over T") != NULL)
         return ref_thermal;
