@@ -150,7 +150,7 @@ typedef struct whorl_progress {
     uint64_t total;    /* 0 when it is not known */
 } whorl_progress;
 
-/* Memory hook: take returns at least `bytes` bytes aligned for double, or NULL; give gets the same size back. */
+/* Memory hook: take returns at least `bytes` bytes aligned to 8, or NULL; give gets the same size back. */
 typedef void *(*whorl_take_function)(void *context, size_t bytes);
 typedef void (*whorl_give_function)(void *context, void *block, size_t bytes);
 
